@@ -211,6 +211,7 @@ def arc_consumption(p, arc, idx, t0, duration, level, attributes, x, out, w):
 @spliced
 def _carry_thresholds(p, state, idx, cause, lanes, pick, level, remaining, attributes, rows, x, w):
     """Whoever lost keeps what was not consumed, unless the patient has reached a state without clocks."""
+    t0_, t1_, ratio_ = x[T0], x[T1], x[TMP]
     n_alive = 0
     for i in range(w):
         a = cause[i]
@@ -224,16 +225,16 @@ def _carry_thresholds(p, state, idx, cause, lanes, pick, level, remaining, attri
             i = lanes[j]
             if cause[i] != arc:
                 pick[n] = idx[i]
-                t0[n] = x[T0, i]
-                duration[n] = x[T1, i] - x[T0, i]
-                x[TMP, n] = rows[p.arcs[arc, RATIO], i] if p.arcs[arc, RATIO] >= 0 else 1.0
+                t0[n] = t0_[i]
+                duration[n] = t1_[i] - t0_[i]
+                ratio_[n] = rows[p.arcs[arc, RATIO], i] if p.arcs[arc, RATIO] >= 0 else 1.0
                 n += 1
         if n == 0:
             continue
         arc_consumption(p, arc, pick, t0, duration, level, attributes, x, used, n)
         carried = remaining[p.arcs[arc, CLOCK]]
         for j in range(n):
-            left = carried[pick[j]] - x[TMP, j] * used[j]
+            left = carried[pick[j]] - ratio_[j] * used[j]
             carried[pick[j]] = left if left > 0.0 else 0.0
 
 
@@ -267,6 +268,7 @@ def _draw_missing(p, state, key0, key1, draw, first_patient, idx, pick, words, a
 @helper
 def _update_memory(fields, state, target, pick, lanes, memory, x, n):
     """The study's own memory fields at a transition state -> target."""
+    t0_, t1_ = x[T0], x[T1]
     for f in range(fields.shape[0]):
         kind, of = fields[f, 0], fields[f, 1]
         field = memory[FIXED + f]
@@ -275,13 +277,13 @@ def _update_memory(fields, state, target, pick, lanes, memory, x, n):
                 field[pick[j]] += 1.0
         elif kind == 2 and of == state:
             for j in range(n):
-                field[pick[j]] += x[T1, lanes[j]] - x[T0, lanes[j]]
+                field[pick[j]] += t1_[lanes[j]] - t0_[lanes[j]]
         elif (kind == 3 and of == target) or (kind == 4 and of == state):
             for j in range(n):
-                field[pick[j]] = x[T1, lanes[j]]
+                field[pick[j]] = t1_[lanes[j]]
         elif kind == 5 and of == state:
             for j in range(n):
-                field[pick[j]] = x[T1, lanes[j]] - x[T0, lanes[j]]
+                field[pick[j]] = t1_[lanes[j]] - t0_[lanes[j]]
         elif kind == 6:
             for j in range(n):
                 field[pick[j]] = state
@@ -297,38 +299,41 @@ def _grid_edge(t, inverse_cell, last):
 @helper
 def _count_presence(state, cause, present, inverse_cell, horizon, x, w):
     """present[state, j]: difference array over grid edges of people in the state."""
+    t0_, t1_ = x[T0], x[T1]
     last = present.shape[1] - 2
     row = present[state]
     for i in range(w):
-        row[_grid_edge(x[T0, i], inverse_cell, last)] += 1.0
-        end = _grid_edge(x[T1, i], inverse_cell, last) if cause[i] >= 0 else last + 1
+        row[_grid_edge(t0_[i], inverse_cell, last)] += 1.0
+        end = _grid_edge(t1_[i], inverse_cell, last) if cause[i] >= 0 else last + 1
         row[end] -= 1.0
 
 
 @helper
 def _reward(flow, first, last, state, n_states, n_clocks, one_rate, idx, accumulators, rows, x, w):
     """Time, discounted time and formula-driven flows flow[first:last] of the sojourns of a block."""
+    t0_, t1_, cost0_, cost1_, effect0_, effect1_ = x[T0], x[T1], x[COST0], x[COST1], x[EFFECT0], x[EFFECT1]
     time = accumulators[state]
     cost = accumulators[n_states + n_clocks + state]
     effect = accumulators[2 * n_states + n_clocks + state]
     for i in range(w):
-        time[idx[i]] += x[T1, i] - x[T0, i]
+        time[idx[i]] += t1_[i] - t0_[i]
     for i in range(w):
-        cost[idx[i]] += x[COST1, i] - x[COST0, i]
+        cost[idx[i]] += cost1_[i] - cost0_[i]
     if not one_rate:
         for i in range(w):
-            effect[idx[i]] += x[EFFECT1, i] - x[EFFECT0, i]
+            effect[idx[i]] += effect1_[i] - effect0_[i]
     for n in range(first, last):
         row, plain, discounted = rows[flow[n, 0]], accumulators[flow[n, 1]], accumulators[flow[n, 2]]
         a, b = (EFFECT0, EFFECT1) if flow[n, 3] == 1 and not one_rate else (COST0, COST1)
         for i in range(w):
-            plain[idx[i]] += row[i] * (x[T1, i] - x[T0, i])
+            plain[idx[i]] += row[i] * (t1_[i] - t0_[i])
             discounted[idx[i]] += row[i] * (x[b, i] - x[a, i])
 
 
 @spliced
 def _entry_amounts(p, state, idx, accumulators, rows, x, w):
     """One-off amounts at entry by a transition (entry time above zero), at their time."""
+    t0_ = x[T0]
     annual, years = p.numbers[3], p.numbers[4]
     for which in range(2):
         const_row = p.states[state, ENTRY_COST + which]
@@ -340,7 +345,7 @@ def _entry_amounts(p, state, idx, accumulators, rows, x, w):
         factor = x[OUT]
         discount_factor(p.numbers[1 + which], annual, years, x[T0], factor, w)
         for i in range(w):
-            factor[i] = factor[i] if x[T0, i] > 0.0 else 0.0
+            factor[i] = factor[i] if t0_[i] > 0.0 else 0.0
         if const_row >= 0:
             total = accumulators[const_row]
             for i in range(w):
@@ -349,7 +354,7 @@ def _entry_amounts(p, state, idx, accumulators, rows, x, w):
             if p.lump[n, 3] == which:
                 row, plain, discounted = rows[p.lump[n, 0]], accumulators[p.lump[n, 1]], accumulators[p.lump[n, 2]]
                 for i in range(w):
-                    plain[idx[i]] += row[i] if x[T0, i] > 0.0 else 0.0
+                    plain[idx[i]] += row[i] if t0_[i] > 0.0 else 0.0
                     discounted[idx[i]] += row[i] * factor[i]
 
 
@@ -374,6 +379,7 @@ def _check(checks, first, last, idx, rows, status, w):
 @spliced
 def _write_log(state, idx, cause, memory, log_index, log_value, status, x, w):
     """Append the block's sojourns: (patient, arc, blocks) and (entry, exit, duration, memory fields at entry)."""
+    t0_, t1_ = x[T0], x[T1]
     at = status[3]
     if at + w > log_value.shape[1]:
         status[0] = LOG_FULL
@@ -383,9 +389,9 @@ def _write_log(state, idx, cause, memory, log_index, log_value, status, x, w):
         patient[at + i] = idx[i]
         arcs[at + i] = cause[i]
     for i in range(w):
-        log_value[0, at + i] = x[T0, i]
-        log_value[1, at + i] = x[T1, i]
-        log_value[2, at + i] = x[T1, i] - x[T0, i]
+        log_value[0, at + i] = t0_[i]
+        log_value[1, at + i] = t1_[i]
+        log_value[2, at + i] = t1_[i] - t0_[i]
     for f in range(FIXED, memory.shape[0]):
         field, row = memory[f], log_value[f]
         for i in range(w):
@@ -400,6 +406,7 @@ def _write_log(state, idx, cause, memory, log_index, log_value, status, x, w):
 @spliced
 def _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, present, inverse_cell, x, n):
     """Move the n patients in ``lanes`` along the arc."""
+    t1_, cost1_, effect1_ = x[T1], x[COST1], x[EFFECT1]
     target = p.arcs[arc, TARGET]
     fired = accumulators[p.sizes[0] + p.arcs[arc, CLOCK]]
     for j in range(n):
@@ -408,20 +415,20 @@ def _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, pr
         horizon = p.numbers[0]
         rest = accumulators[target]
         for j in range(n):
-            rest[pick[j]] += horizon - x[T1, lanes[j]]
+            rest[pick[j]] += horizon - t1_[lanes[j]]
         if present.shape[0] > 0:
             last = present.shape[1] - 2
             for j in range(n):
-                present[target, _grid_edge(x[T1, lanes[j]], inverse_cell, last)] += 1.0
+                present[target, _grid_edge(t1_[lanes[j]], inverse_cell, last)] += 1.0
         return
     entry_time, cost, effect = memory[0], memory[1], memory[2]
     for j in range(n):
         i = lanes[j]
-        entry_time[pick[j]] = x[T1, i]
-        cost[pick[j]] = x[COST1, i]
+        entry_time[pick[j]] = t1_[i]
+        cost[pick[j]] = cost1_[i]
     if p.numbers[1] != p.numbers[2]:
         for j in range(n):
-            effect[pick[j]] = x[EFFECT1, lanes[j]]
+            effect[pick[j]] = effect1_[lanes[j]]
     _update_memory(p.fields, state, target, pick, lanes, memory, x, n)
     at = counts[target]
     for j in range(n):
@@ -433,16 +440,17 @@ def _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, pr
 def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, remaining, accumulators, rows, x, ints, words,
              waiting, counts, present, log_index, log_value, status, w):  # fmt: skip
     """One block of one state: from entry to exit. False if the status says stop."""
+    t0_, t1_, cost0_, effect0_, best_ = x[T0], x[T1], x[COST0], x[EFFECT0], x[BEST]
     idx, cause, lanes, pick, level = ints[0], ints[1], ints[2], ints[3], ints[4]
     horizon, annual, years = p.numbers[0], p.numbers[3], p.numbers[4]
     inverse_cell, one_rate = 1.0 / p.numbers[5], p.numbers[1] == p.numbers[2]
     for i in range(w):
-        x[T0, i] = memory[0, idx[i]]
+        t0_[i] = memory[0, idx[i]]
     for i in range(w):
-        x[COST0, i] = memory[1, idx[i]]
+        cost0_[i] = memory[1, idx[i]]
     if not one_rate:
         for i in range(w):
-            x[EFFECT0, i] = memory[2, idx[i]]
+            effect0_[i] = memory[2, idx[i]]
     fill_rows(p.gather, p.states[state, GATHER], p.states[state, GATHER_END], years, idx, idx, x[T0], attributes, memory, rows, w)
     run_tape(p.tape, p.states[state, TAPE], p.states[state, TAPE_END], rows, w)
     if not _check(p.checks, p.states[state, CHECK], p.states[state, CHECK_END], idx, rows, status, w):
@@ -451,9 +459,9 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
     _draw_missing(p, state, key0, key1, draw, first_patient, idx, pick, words, accumulators, remaining, x[OUT], w)
     _first_firing(p, state, idx, cause, level, remaining, attributes, rows, x, w)
     for i in range(w):
-        t = x[T0, i] + x[BEST, i]
+        t = t0_[i] + best_[i]
         over = t > horizon
-        x[T1, i] = horizon if over else t
+        t1_[i] = horizon if over else t
         cause[i] = -1 if over else cause[i]
     discount_integral(p.numbers[1], annual, years, x[T1], x[COST1], w)
     if not one_rate:

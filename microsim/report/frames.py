@@ -73,6 +73,12 @@ def number(value: float, *, figures: int = 4) -> str:
     return fixed(value, max(0, figures - 1 - magnitude))
 
 
+def trimmed(value: float) -> str:
+    """As ``number``, without zeros at the end of its decimals."""
+    text = number(value)
+    return text.rstrip("0").rstrip(".") if "." in text else text
+
+
 def fixed(value: float, decimals: int) -> str:
     """A fixed number of decimals, thousands separated, without a signed zero."""
     text = f"{float(value):,.{decimals}f}"

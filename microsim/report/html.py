@@ -21,7 +21,7 @@ from microsim.report.frames import VERDICT_MARKS, currency_of, money, verdict_ba
 from microsim.report.inputs import ResultLike
 from microsim.report.sheets import Sheet
 from microsim.report.style import inline_svg
-from microsim.report.words import ASSUMPTIONS, LEADS, MEANINGS, TITLES, all_cautions
+from microsim.report.words import ASSUMPTIONS, LEADS, MEANINGS, TITLES, all_cautions, study_warnings
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,7 +118,10 @@ def _contents(result: ResultLike) -> dict[str, tuple[list[Sheet], list[str]]]:
         "fits": ([sheets.fit_sheet(result)], sheets.fit_warnings(result)),
         "rates": ([sheets.rate_sheet(result)], []),
         "outcomes": (sheets.outcome_sheets(result), []),
-        "assumptions": ([sheets.settings_sheet(result), sheets.defaults_sheet(result)], list(ASSUMPTIONS)),
+        "assumptions": (
+            [sheets.settings_sheet(result), sheets.defaults_sheet(result)],
+            [*ASSUMPTIONS, *study_warnings(result)],
+        ),
         "manifest": ([sheets.manifest_sheet(result)] if manifest else [], []),
         "cautions": ([], all_cautions(result)),
     }

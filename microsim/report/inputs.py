@@ -146,8 +146,8 @@ class ResultLike(Protocol):
     """One finished comparison.
 
     tables: name -> frame with at least COLUMNS[name]. summary keys: title, invented, headline, sentences, cautions,
-    settings (mapping), currency, time_unit, defaults ([key, value] pairs), labels ({"strategies", "states", "clocks"}
-    -> name -> label). manifest: nested mapping of hashes, versions, seed and timing.
+    settings (mapping), currency, time_unit, defaults ([key, value] pairs), warnings, labels ({"strategies", "states",
+    "clocks"} -> name -> label). manifest: nested mapping of hashes, versions, seed and timing.
     """
 
     @property

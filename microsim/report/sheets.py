@@ -34,6 +34,7 @@ from microsim.report.frames import (
     plain,
     rows_of,
     stated_rule,
+    trimmed,
     verdict_use,
     with_error,
 )
@@ -317,8 +318,7 @@ def fit_sheet(result: ResultLike) -> Sheet:
 
 
 def _pairs(values: Any) -> str:
-    return ", ".join(f"{name} {number(value).rstrip('0').rstrip('.') if value % 1 else number(value)}"
-                     for name, value in values.items())  # fmt: skip
+    return ", ".join(f"{name} {trimmed(value)}" for name, value in values.items())
 
 
 def fit_warnings(result: ResultLike) -> list[str]:
@@ -335,7 +335,10 @@ def settings_sheet(result: ResultLike) -> Sheet:
     return Sheet("Settings of this run.", ("Setting", "Value"), rows, left=2)
 
 
+_SHOWN_ELSEWHERE = ("settings", "defaults", "fits")
+
+
 def manifest_sheet(result: ResultLike) -> Sheet:
     note = "The same study, seed and version give the same numbers, for any number of threads."
-    rows = tuple(flat(result.manifest))
+    rows = tuple(flat({key: value for key, value in result.manifest.items() if key not in _SHOWN_ELSEWHERE}))
     return Sheet("What made these numbers.", ("Entry", "Value"), rows, left=2, note=note)

@@ -66,6 +66,11 @@ CAUTIONS = (
 INVENTED = "The data of this study are invented. No result here describes any real treatment or patient."
 
 
+def study_warnings(result: ResultLike) -> list[str]:
+    """What the study's own check remarked on without refusing it."""
+    return [f"Remark on the study: {text}" for text in result.summary.get("warnings", ())]
+
+
 def all_cautions(result: ResultLike) -> list[str]:
     """The study's own cautions after the standing ones, each once."""
     own = [str(text) for text in result.summary.get("cautions", ())]

@@ -41,32 +41,37 @@ def bind(
     overrides: input or coefficient name -> value in study units. Raises InputError with every impossible number.
     """
     faults = FaultList()
-    given: dict[str, float] = {}
-    hazards: dict[str, Hazard] = {}
-    for f in study.fits:
-        fit = (fits or {}).get(f.name)
-        missing = [f.name] if fit is None else [c for c in f.coefficients if c not in fit.coefficients]
-        if fit is None or missing:
-            problem = f"the fit has not been made or lacks {', '.join(missing)}"
-            faults.add(
-                STUDY_FILE,
-                f"fits.{f.name}",
-                problem,
-                "Fit the data before binding.",
-                where=study.lines.where(f"fits.{f.name}"),
-            )
-            continue
-        hazards[f.name] = fit.hazard
-        given.update({c: float(fit.coefficients[c]) for c in f.coefficients})
+    hazards, given = _from_fits(study, fits or {}, faults)
     known = {*study.input_names, *(c for f in study.fits for c in f.coefficients)}
     for name, value in (overrides or {}).items():
         if name not in known:
             faults.add(study.inputs_file, name, f"unknown input {name!r}", nearest(name, known))
         given[name] = float(value)
+    for name, value in given.items():
+        if not math.isfinite(value):
+            faults.add(study.inputs_file, name, "the value is not a finite number", "Correct it.", value=value)
     faults.raise_if_any()
     bound = assemble(study, given, hazards, faults=faults, partial=False)
     faults.raise_if_any()
     return bound
+
+
+def _from_fits(
+    study: Study, fits: Mapping[str, FittedHazard], faults: FaultList
+) -> tuple[dict[str, Hazard], dict[str, float]]:
+    """Hazards by fit, and values of all coefficients."""
+    hazards: dict[str, Hazard] = {}
+    given: dict[str, float] = {}
+    for f in study.fits:
+        key, fit = f"fits.{f.name}", fits.get(f.name)
+        missing = [c for c in f.coefficients if fit is not None and c not in fit.coefficients]
+        if fit is None or missing:
+            problem = "the fit has not been made" if fit is None else f"the fit lacks {', '.join(missing)}"
+            faults.add(STUDY_FILE, key, problem, "Fit the data before binding.", where=study.lines.where(key))
+            continue
+        hazards[f.name] = fit.hazard
+        given.update({c: float(fit.coefficients[c]) for c in f.coefficients})
+    return hazards, given
 
 
 def check_numbers(study: Study, faults: FaultList) -> BoundStudy:
@@ -100,8 +105,8 @@ def check_input_values(inputs: tuple[Input, ...], values: Mapping[str, float], *
         v = values[i.name]
         problem = ""
         if not math.isfinite(v):
-            circular = any(n.op == "input" and not math.isfinite(values[n.name]) for n in i.node.walk())
-            problem = "" if circular else "the value is not a finite number"
+            inherited = any(n.op == "input" and not math.isfinite(values[n.name]) for n in i.node.walk())
+            problem = "" if inherited else "the value is not a finite number"
         elif i.unit == "probability" and not 0 <= v <= 1:
             problem = "a probability lies in [0, 1]"
         elif i.unit == "utility" and v > 1:
@@ -170,7 +175,7 @@ class _Changer:
         if change.how != "set":
             op, sign = ("mul", "*") if change.how == "times" else ("add", "+")
             node = Node(op, (const(0.0) if base is None else base.node, node))
-            text = f"({base.text if base else 0}) {sign} ({text})" if text else ""
+            text = f"({base.text if base else 0}) {sign} ({text})" if text and (base is None or base.text) else ""
         return self.numbers.folded(node, self.key_of(path), text=text)
 
     def costs(self, path: tuple[str, ...], base: Mapping[str, Formula]) -> dict[str, Node]:
@@ -204,7 +209,7 @@ def _clock(k: Clock, strategy: Strategy, changer: _Changer, hazards: Mapping[str
         )
     own = strategy.hazards.get(k.name)
     key = f"clocks.{k.name}.hazard" if own is None else f"strategies.{strategy.name}.clocks.{k.name}.hazard"
-    hazard = changer.numbers.hazard(own or k.hazard, key, hazards)
+    hazard = changer.numbers.hazard(own or k.hazard, key, fits=hazards)
     return BoundClock(k.name, k.sources, k.target, k.scale, hazard, ratio, k.background, k.label)
 
 
@@ -214,7 +219,7 @@ def values_at_first_entry(node: Node, *, state: str, levels: Mapping[str, int]) 
     Empty where the formula reads something else that differs between patients, or an unknown input.
     """
     if node.is_const:
-        return [] if math.isnan(node.value) else [node.value]
+        return [node.value] if math.isfinite(node.value) else []
     leaves = [n for n in node.walk() if n.op in ("attribute", "memory", "input")]
     numeric = any(n.op == "attribute" and not levels.get(n.name) for n in leaves)
     if numeric or any(n.op == "input" or (n.of == "age" and n.name == "at_entry") for n in leaves):

@@ -31,8 +31,10 @@ def _law(attribute: Attribute, spec: LawSpec, numbers: Numbers) -> Law:
     path = key if spec.kind == "constant" else f"{key}.{spec.kind}"
     p = {n: numbers.number(f, f"{path}.{n}") * spec.scales.get(n, 1.0) for n, f in spec.params.items()}
     if spec.kind == "choice":
-        return Law("choice", _choice(p, path, numbers))
-    own = _own_parameters(spec.kind, p, path, numbers)
+        return Law("choice", _choice(p, key=path, numbers=numbers))
+    own = _own_parameters(spec.kind, p, key=path, numbers=numbers)
+    if any(math.isinf(v) for v in own.values()):
+        numbers.fault(path, "its parameters are too extreme to compute with", "Correct them.", value=p)
     for name in _POSITIVE.get(spec.kind, ()):
         if own.get(name, 1.0) <= 0:
             numbers.fault(f"{path}.{name}", f"{name} must be positive", "Correct it.", value=f"{own[name]:g}")
@@ -42,7 +44,7 @@ def _law(attribute: Attribute, spec: LawSpec, numbers: Numbers) -> Law:
     return Law(spec.kind, own, spec.within)
 
 
-def _choice(p: Mapping[str, float], key: str, numbers: Numbers) -> dict[str, float]:
+def _choice(p: Mapping[str, float], *, key: str, numbers: Numbers) -> dict[str, float]:
     for level, value in p.items():
         if not 0 <= value <= 1 and not math.isnan(value):
             numbers.fault(f"{key}.{level}", "a probability lies in [0, 1]", "Correct it.", value=f"{value:g}")
@@ -53,7 +55,7 @@ def _choice(p: Mapping[str, float], key: str, numbers: Numbers) -> dict[str, flo
     return {f"p{i}": v for i, v in enumerate(p.values())}
 
 
-def _own_parameters(kind: str, p: dict[str, float], key: str, numbers: Numbers) -> dict[str, float]:
+def _own_parameters(kind: str, p: dict[str, float], *, key: str, numbers: Numbers) -> dict[str, float]:
     """Method of moments for lognormal, gamma and beta given by mean and sd; other parameters pass through."""
     if kind not in ("lognormal", "gamma", "beta") or set(p) != {"mean", "sd"}:
         return p
@@ -63,13 +65,14 @@ def _own_parameters(kind: str, p: dict[str, float], key: str, numbers: Numbers) 
             numbers.fault(f"{key}.{name}", f"{name} must be positive", "Correct it.", value=f"{value:g}")
             mean = sd = math.nan
     if kind == "lognormal":
-        variance = math.log1p((sd / mean) ** 2)
+        spread = sd / mean
+        variance = math.log1p(spread * spread)
         return {"meanlog": math.log(mean) - variance / 2, "sdlog": math.sqrt(variance)}
     if kind == "gamma":
-        return {"shape": (mean / sd) ** 2, "rate": mean / sd**2}
-    if mean >= 1 or sd**2 >= mean * (1 - mean):
+        return {"shape": (mean / sd) * (mean / sd), "rate": mean / sd / sd}
+    if mean >= 1 or sd * sd >= mean * (1 - mean):
         numbers.fault(key, "no beta law has this mean and sd", "The mean lies below 1 and sd^2 below mean (1 - mean).",
                       value=f"mean {mean:g}, sd {sd:g}")  # fmt: skip
         return {"a": math.nan, "b": math.nan}
-    size = mean * (1 - mean) / sd**2 - 1
+    size = mean * (1 - mean) / sd / sd - 1
     return {"a": mean * size, "b": (1 - mean) * size}

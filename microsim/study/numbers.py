@@ -55,11 +55,11 @@ class Numbers:
         return all(math.isfinite(self.values[n.name]) for n in node.walk() if n.op == "input")
 
     def number(self, formula: Formula, key: str) -> float:
-        """Value of a formula over inputs; nan if not known."""
+        """Value of a formula over inputs; nan if not known or not finite."""
         node = self.folded(formula.node, key, text=formula.text)
-        return node.value if node.is_const else math.nan
+        return node.value if node.is_const and math.isfinite(node.value) else math.nan
 
-    def hazard(self, spec: HazardSpec, key: str, fits: Mapping[str, Hazard]) -> Hazard:
+    def hazard(self, spec: HazardSpec, key: str, *, fits: Mapping[str, Hazard]) -> Hazard:
         """The hazard in study time units, its parameters checked."""
         if spec.kind == "table":
             return Hazard("table", by=spec.by, edges=spec.edges, rates=spec.rates)
@@ -67,7 +67,10 @@ class Numbers:
             hazard = fits.get(spec.fit, UNKNOWN_HAZARD)
         else:
             hazard = Hazard(spec.kind, self._parameters(spec, key))
-        for name, problem in parameter_problems(hazard):
+        problems = parameter_problems(hazard)
+        if not self.partial and spec.kind == "fit":
+            problems += [(n, "the fit gave no number") for n, v in hazard.params.items() if math.isnan(v)]
+        for name, problem in problems:
             self.fault(
                 key,
                 problem,
@@ -91,11 +94,11 @@ class Numbers:
             if mean <= 0:
                 self.fault(f"{prefix}.mean", "a mean time must be positive", "Correct it.", value=f"{mean:g}")
                 mean = math.nan
-            return {"meanlog": math.log(mean) - sdlog**2 / 2, "sdlog": sdlog}
-        return {n: to_study_units(spec.kind, n, v, spec.scale) for n, v in p.items()}
+            return {"meanlog": math.log(mean) - sdlog * sdlog / 2, "sdlog": sdlog}
+        return {n: to_study_units(spec.kind, n, value=v, scale=spec.scale) for n, v in p.items()}
 
 
-def to_study_units(family: str, parameter: str, value: float, scale: float) -> float:
+def to_study_units(family: str, parameter: str, *, value: float, scale: float) -> float:
     """A parameter written in another time unit; scale: study units per such unit."""
     if (family, parameter) == ("lognormal", "meanlog"):
         return value + math.log(scale)

@@ -87,6 +87,7 @@ class HazardReader:
         per = table.per.value * factor_between(table.per.unit, self.ctx.study_unit)
         if per <= 0:
             self.ctx.fault(f"{key}.per", "the time must be positive", "Correct it.", value=table.per.value)
+            return NO_HAZARD
         return HazardSpec("exponential", params={"probability": formula}, form="probability", per=per)
 
     def _family(self, table: HazardTable, key: str, family: str) -> HazardSpec:

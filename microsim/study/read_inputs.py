@@ -27,6 +27,8 @@ def declare_inputs(ctx: Context, file: str | None) -> Csv | None:
     name = file or "inputs.csv"
     if file is None and not (ctx.root / name).is_file():
         return None
+    if file is None:
+        ctx.default("inputs", name)
     text = ctx.read(name, "inputs")
     table = parse_csv(text, file=name, required=REQUIRED, faults=ctx.faults) if text is not None else None
     if table is None:

@@ -185,6 +185,8 @@ def _long_form(
 def _consecutive(level: _Level, out: RowFaults) -> None:
     ages, rows = level.ages, level.rows
     for i, age in enumerate(ages):
+        if math.isnan(age) or (i and math.isnan(ages[i - 1])):
+            continue
         if age != math.floor(age):
             out.add("age", "ages must be whole years", "Round to completed years.", row=rows[i], value=age)
         elif i and age != ages[i - 1] + 1:

@@ -56,7 +56,9 @@ def validate(raw: Raw, *, lines: Lines, faults: FaultList) -> StudyFile | None:
         except ValidationError as e:
             for path, errors in _by_path(e, data).items():
                 key = ".".join(path)
-                if not any(f.file == STUDY_FILE and f.key == key for f in faults.faults):
+                if not any(
+                    f.file == STUDY_FILE and (f.key == key or f.key.startswith(key + ".")) for f in faults.faults
+                ):
                     problem, remedy, value = _words(path, errors, data)
                     faults.add(STUDY_FILE, key, problem, remedy, value=value, where=lines.where(key))
                 _repair(path, errors[0], data)
@@ -104,9 +106,10 @@ def _words(path: tuple[str, ...], errors: list[ErrorDetails], data: Raw) -> tupl
         allowed = str(e["ctx"]["expected"])
         words = re.findall(r"'([^']*)'", allowed)
         return "not one of the choices", nearest(str(e["input"]), words) if words else f"Write {allowed}.", value
-    if kind == "finite_number":
+    if any(x["type"] == "finite_number" for x in errors):
         return "not a finite number", "Write a finite number.", value
-    wanted = sorted({_WANTED.get(x["type"], "") for x in errors} - {""})
+    kinds = {_WANTED.get(x["type"], "") for x in errors} - {""}
+    wanted = sorted(kinds - {"a whole number"} if "a number" in kinds else kinds)
     if not wanted:
         return e["msg"][0].lower() + e["msg"][1:], "Correct the value.", value
     return "the value has the wrong type", f"Write {' or '.join(wanted)}.", value

@@ -2,8 +2,8 @@
 
 A stated truth (TRUTH below) is lived, event by event, by 600 invented patients who are discharged from their first
 admission and then followed for two to five years. No row stands for a real person. Run it with
-``python make_episodes.py``; the same two files come out, byte for byte. It uses uniform numbers and their inverses only,
-so that the files do not depend on how a library samples a distribution.
+``python make_episodes.py``; the same two files come out, byte for byte. Only uniform numbers and their inverses are
+used, so that the files do not depend on how a library samples a distribution.
 """
 
 from __future__ import annotations

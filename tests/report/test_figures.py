@@ -23,7 +23,7 @@ from microsim.report.figures import (
     slug,
     tolerance_figure,
 )
-from microsim.report.style import svg_bytes
+from microsim.report.style import line_look, svg_bytes
 
 
 def _texts(axes: object) -> list[str]:
@@ -52,7 +52,26 @@ def test_a_term_that_is_zero_by_construction_has_words_and_no_bar(result: Result
     axes = figure.axes[0]
     assert _texts(axes).count("by construction") == 2
     rows = {round(p.get_y() + p.get_height() / 2) for p in axes.patches if isinstance(p, Rectangle)}
-    assert rows == {0, 3, 4}
+    assert rows == {3}
+
+
+def test_steps_that_bars_would_dwarf_get_a_narrow_axis_that_says_so(result: Result) -> None:
+    wide = bridge_figure(result, strategy="nurse_led", use="carried", rule="half-cycle").axes[0]
+    narrow = bridge_figure(result, strategy="nurse_led", use="own", rule="half-cycle").axes[0]
+    assert wide.get_xlim()[0] < 0 < wide.get_xlim()[1]
+    assert narrow.get_xlim()[0] > 0
+    assert "does not start at zero" in narrow.get_title(loc="left")
+    assert "does not start at zero" not in wide.get_title(loc="left")
+    values = sorted(float(line.get_xdata()[0]) for line in narrow.lines if line.get_marker() == "D")
+    gap = result.tables["gap"]
+    row = gap[(gap["use"] == "own") & (gap["cycle_rule"] == "half-cycle") & (gap["threshold"] == 20_000)].iloc[0]
+    assert values == sorted([row["cohort"], row["full"]])
+
+
+def test_sixteen_lines_never_share_colour_and_dash() -> None:
+    looks = [line_look(k) for k in range(16)]
+    assert len({str(look) for look in looks}) == 16
+    assert all(a[0] != b[0] and a[1] != b[1] for a, b in pairwise(looks))
 
 
 def test_the_difference_panel_shows_cohort_minus_individual(result: Result) -> None:

@@ -13,6 +13,7 @@ from microsim.report.frames import (
     number,
     outcome_label,
     stated_rule,
+    trimmed,
     verdict_use,
     with_error,
 )
@@ -66,6 +67,12 @@ def test_a_rounded_zero_has_no_sign() -> None:
 def test_money_is_whole_from_a_hundred_upwards() -> None:
     assert money(20_000) == "20,000"
     assert money(99.5) == "99.50"
+
+
+def test_a_parameter_ends_without_idle_zeros() -> None:
+    assert trimmed(0.52) == "0.52"
+    assert trimmed(420.0) == "420"
+    assert trimmed(12_000.0) == "12,000"
 
 
 def test_decimals_never_exceed_six() -> None:

@@ -148,6 +148,15 @@ def test_every_verdict_has_its_meaning_in_words(result: Result, headline: str) -
     assert expected[headline] in text
 
 
+def test_the_manifest_does_not_repeat_what_has_a_table_and_warnings_are_told(result: Result) -> None:
+    result.manifest |= {"defaults": [["a.b", "once only"]], "fits": {"home_stay": {"loglik": -123.456}}}
+    result.summary["warnings"] = ["The life table ends at 100."]
+    text = Page(render_report(result)).text
+    assert "once only" not in text
+    assert "123.456" not in text
+    assert "Remark on the study: The life table ends at 100." in text
+
+
 def test_missing_increments_show_a_dash(result: Result) -> None:
     result.tables["incremental"]["icer"] = np.nan
     result.tables["incremental"]["status"] = "dominated"
