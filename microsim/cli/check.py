@@ -158,7 +158,7 @@ def _print_summary(study: Study) -> None:
         console.print(line)
     _heading(console, "Clocks")
     rows = [(e.clock, f"{e.source} -> {e.target}", e.scale, e.hazard, e.ratio) for e in graph.edges]
-    _table(console, ("clock", "from -> to", "time", "hazard", "ratio"), rows)
+    _table(console, ("clock", "from -> to", "time", "hazard", "ratio"), rows=rows)
     _heading(console, "Strategies")
     for s in study.strategies:
         comparator = " (comparator)" if s.name == study.decision.comparator else ""
@@ -180,7 +180,7 @@ def _heading(console: Console, text: str) -> None:
     console.print(text, style="bold")
 
 
-def _table(console: Console, header: tuple[str, ...], rows: Iterable[tuple[str, ...]]) -> None:
+def _table(console: Console, header: tuple[str, ...], *, rows: Iterable[tuple[str, ...]]) -> None:
     from rich import box
     from rich.table import Table
 

@@ -15,7 +15,7 @@ from microsim.engine.draws import draw_thresholds
 from microsim.engine.tape import run_tape
 from microsim.hazards import kernels, vmath
 
-BLOCK = 256
+BLOCK = 512
 FIXED = 3  # memory rows before the study's own: entry time, discount integral for costs, for effects
 OK, LOG_FULL, BAD_FORMULA, RUNAWAY = range(4)
 MAX_EVENTS = 100_000.0  # per patient, on average over a chunk
@@ -167,11 +167,15 @@ def _table_firing(p, arc, idx, level, cause, attributes, x, w):
     par = p.arc_par[arc]
     fill_level(p.arcs[arc, LEVEL], p.arcs[arc, STRIDE], p.arcs[arc, BY], idx, attributes, level, w)
     kernels.table_cumulative(par, level, p.table_cum, p.table_rate, origin, target, w)
+    at_entry = x[USED]
     for i in range(w):
+        at_entry[i] = target[i]
         stop = horizon - t0[i]
         end[i] = origin[i] + (best[i] if best[i] < stop else stop)
         target[i] = target[i] + scaled[i]
     kernels.table_cumulative(par, level, p.table_cum, p.table_rate, end, at_end, w)
+    for i in range(w):
+        at_entry[i] = at_end[i] - at_entry[i]
     n = 0
     sub1, sub2, lanes = x[SUB1], x[SUB2], x[OUT]
     for i in range(w):
@@ -220,18 +224,25 @@ def _carry_thresholds(p, state, idx, cause, lanes, pick, level, remaining, attri
         n_alive += 1 if goes_on else 0
     for arc in range(p.states[state, ARC], p.states[state, ARC_END]):
         n = 0
+        # what the last table consumed up to the first firing is known from the search for it
+        known = arc == p.states[state, ARC_END] - 1 and p.arcs[arc, FAMILY] == kernels.TABLE
         t0, duration, used = x[SUB1], x[SUB2], x[OUT]
         for j in range(n_alive):
-            i = lanes[j]
-            if cause[i] != arc:
-                pick[n] = idx[i]
-                t0[n] = t0_[i]
-                duration[n] = t1_[i] - t0_[i]
-                ratio_[n] = rows[p.arcs[arc, RATIO], i] if p.arcs[arc, RATIO] >= 0 else 1.0
-                n += 1
+            level[n] = lanes[j]
+            n += 1 if cause[lanes[j]] != arc else 0
         if n == 0:
             continue
-        arc_consumption(p, arc, pick, t0, duration, level, attributes, x, used, n)
+        known_used, has_ratio = x[USED], p.arcs[arc, RATIO] >= 0
+        ratio_row = rows[max(p.arcs[arc, RATIO], 0)]
+        for j in range(n):
+            i = level[j]
+            pick[j] = idx[i]
+            used[j] = known_used[i]
+            t0[j] = t0_[i]
+            duration[j] = t1_[i] - t0_[i]
+            ratio_[j] = ratio_row[i] if has_ratio else 1.0
+        if not known:
+            arc_consumption(p, arc, pick, t0, duration, level, attributes, x, used, n)
         carried = remaining[p.arcs[arc, CLOCK]]
         for j in range(n):
             left = carried[pick[j]] - ratio_[j] * used[j]

@@ -25,7 +25,7 @@ from microsim.study.bound import BoundStudy
 F = npt.NDArray[np.float64]
 
 GROUPS = 40
-CHUNK = 2048  # patients; larger chunks fall out of cache, smaller ones leave blocks half empty
+CHUNK = 4096
 TIME_CELLS = 160
 SOJOURN_CELLS = 32
 Progress = Callable[[int, int], None]

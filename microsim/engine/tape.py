@@ -61,7 +61,7 @@ def _function(code, d, a, b, w):
             d[i] = np.sqrt(a[i])
     else:
         for i in range(w):
-            d[i] = a[i] ** b[i]
+            d[i] = vmath.power(a[i], b[i])
 
 
 @helper

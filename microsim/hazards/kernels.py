@@ -148,7 +148,8 @@ def inverse(family, par, h, out, w):
         for i in range(w):
             x = h[i]
             p = vmath.exp(-x)
-            z = vmath.normal_quantile_tail(p, -vmath.expm1(-x), x)
+            q = -vmath.expm1_near(-x) if x < 0.34 else 1.0 - p
+            z = vmath.normal_quantile_tail(p, q, x)
             z = z if x > 0.0 else np.inf  # quantile of the survivor probability
             out[i] = vmath.exp(mean - sd * z) if x < np.inf else np.inf
     else:

@@ -90,8 +90,8 @@ def log1p(x):
 
 
 @inlined
-def expm1(x):
-    """exp(x) - 1, accurate near 0."""
+def expm1_near(x):
+    """exp(x) - 1 for |x| < 0.34."""
     p = fma(x, 1.0 / 6227020800.0, 1.0 / 479001600.0)
     p = fma(x, p, 1.0 / 39916800.0)
     p = fma(x, p, 1.0 / 3628800.0)
@@ -103,8 +103,13 @@ def expm1(x):
     p = fma(x, p, 1.0 / 24.0)
     p = fma(x, p, 1.0 / 6.0)
     p = fma(x, p, 0.5)
-    near = fma(x * x, p, x)
-    return near if abs(x) < 0.34 else exp(x) - 1.0
+    return fma(x * x, p, x)
+
+
+@inlined
+def expm1(x):
+    """exp(x) - 1, accurate near 0."""
+    return expm1_near(x) if abs(x) < 0.34 else exp(x) - 1.0
 
 
 @inlined
@@ -147,3 +152,13 @@ def normal_quantile_tail(p, q, minus_log_p):
     tail = n / d
     tail = -tail if c < 0.0 else tail
     return central if abs(c) <= 0.425 else tail
+
+
+@inlined
+def power(x, y):
+    """x ** y as NumPy means it: 1 for y = 0, nan for a negative x and fractional y. Error grows as |y log x| units."""
+    magnitude = exp(y * log(abs(x)))
+    whole = np.floor(y) == y
+    odd = whole & (np.floor(0.5 * y) * 2.0 != y)
+    value = magnitude if x >= 0.0 else ((-magnitude if odd else magnitude) if whole else np.nan)
+    return 1.0 if (y == 0.0) | (x == 1.0) else (value if (x == x) & (y == y) else np.nan)

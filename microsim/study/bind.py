@@ -41,7 +41,7 @@ def bind(
     overrides: input or coefficient name -> value in study units. Raises InputError with every impossible number.
     """
     faults = FaultList()
-    hazards, given = _from_fits(study, fits or {}, faults)
+    hazards, given = _from_fits(study, fits or {}, faults=faults)
     known = {*study.input_names, *(c for f in study.fits for c in f.coefficients)}
     for name, value in (overrides or {}).items():
         if name not in known:
@@ -51,13 +51,13 @@ def bind(
         if not math.isfinite(value):
             faults.add(study.inputs_file, name, "the value is not a finite number", "Correct it.", value=value)
     faults.raise_if_any()
-    bound = assemble(study, given, hazards, faults=faults, partial=False)
+    bound = assemble(study, given, hazards=hazards, faults=faults, partial=False)
     faults.raise_if_any()
     return bound
 
 
 def _from_fits(
-    study: Study, fits: Mapping[str, FittedHazard], faults: FaultList
+    study: Study, fits: Mapping[str, FittedHazard], *, faults: FaultList
 ) -> tuple[dict[str, Hazard], dict[str, float]]:
     """Hazards by fit, and values of all coefficients."""
     hazards: dict[str, Hazard] = {}
@@ -76,11 +76,11 @@ def _from_fits(
 
 def check_numbers(study: Study, faults: FaultList) -> BoundStudy:
     """Everything that can be computed before fits exist; faults are added, the result only serves further checks."""
-    return assemble(study, {}, {}, faults=faults, partial=True)
+    return assemble(study, {}, hazards={}, faults=faults, partial=True)
 
 
 def assemble(
-    study: Study, given: Mapping[str, float], hazards: Mapping[str, Hazard], *, faults: FaultList, partial: bool
+    study: Study, given: Mapping[str, float], *, hazards: Mapping[str, Hazard], faults: FaultList, partial: bool
 ) -> BoundStudy:
     """Fold everything. given: replaced inputs and coefficients; hazards: by fit."""
     values = resolve(study.inputs, given)
@@ -92,12 +92,14 @@ def assemble(
         title=study.title, invented=study.text.invented, time_unit=study.time_unit, years_per_unit=study.years_per_unit,
         horizon=study.horizon, currency=study.text.currency, categories=study.categories,
         population=bind_population(study, base),
-        arms=tuple(_arm(study, s, base, given=given, hazards=hazards, starts=starts) for s in study.strategies),
+        arms=tuple(_arm(study, s, base=base, given=given, hazards=hazards, starts=starts) for s in study.strategies),
         discounting=study.discounting, decision=study.decision, cohort=study.cohort, inputs=values,
     )  # fmt: skip
 
 
-def check_input_values(inputs: tuple[Input, ...], values: Mapping[str, float], *, file: str, faults: FaultList) -> None:
+def check_input_values(
+    inputs: tuple[Input, ...], values: Mapping[str, float], *, file: str, faults: FaultList, under: str = ""
+) -> None:
     """Values must be finite and within what their unit allows. A fault in the text itself has been told already."""
     for i in inputs:
         if i.name not in values or (i.node.is_const and math.isnan(i.node.value)):
@@ -112,7 +114,9 @@ def check_input_values(inputs: tuple[Input, ...], values: Mapping[str, float], *
         elif i.unit == "utility" and v > 1:
             problem = "a utility is at most 1"
         if problem:
-            faults.add(file, i.name, problem, "Correct the value or its unit.", value=f"{v:g}", where=f"row {i.row}")
+            faults.add(
+                file, i.name, problem + under, "Correct the value or its unit.", value=f"{v:g}", where=f"row {i.row}"
+            )
 
 
 def _check_starts(base: Numbers, starts: Mapping[str, float]) -> None:
@@ -128,8 +132,8 @@ def _check_starts(base: Numbers, starts: Mapping[str, float]) -> None:
 def _arm(
     study: Study,
     strategy: Strategy,
-    base: Numbers,
     *,
+    base: Numbers,
     given: Mapping[str, float],
     hazards: Mapping[str, Hazard],
     starts: Mapping[str, float],
@@ -142,17 +146,16 @@ def _arm(
         unknown = set(own) - set(known)
         inputs = tuple(i for i in study.inputs if i.name not in unknown)
         arm = Numbers(resolve(inputs, {**given, **known}), base.faults, study.lines, base.partial)
-        check_input_values(
-            tuple(i for i in inputs if arm.values.get(i.name) != base.values.get(i.name)),
-            arm.values, file=f"{STUDY_FILE} ({key}.inputs)", faults=base.faults,
-        )  # fmt: skip
+        changed = tuple(i for i in inputs if arm.values.get(i.name) != base.values.get(i.name))
+        under = f" (under strategy {strategy.name})"
+        check_input_values(changed, arm.values, file=study.inputs_file, faults=base.faults, under=under)
     changes = {d.path: d for d in strategy.differences}
     changer = _Changer(arm, key, changes)
     levels = {a.name: len(a.levels) for a in study.attributes}
     return BoundArm(
         strategy.name, strategy.label,
         tuple(_state(s, changer, start=starts[s.name], levels=levels) for s in study.states),
-        tuple(_clock(k, strategy, changer, hazards) for k in study.clocks),
+        tuple(_clock(k, strategy, changer=changer, hazards=hazards) for k in study.clocks),
         {c: arm.number(f, f"{key}.once.cost.{c}") for c, f in strategy.once.items()},
     )  # fmt: skip
 
@@ -200,7 +203,7 @@ def _state(s: State, changer: _Changer, *, start: float, levels: Mapping[str, in
     )  # fmt: skip
 
 
-def _clock(k: Clock, strategy: Strategy, changer: _Changer, hazards: Mapping[str, Hazard]) -> BoundClock:
+def _clock(k: Clock, strategy: Strategy, *, changer: _Changer, hazards: Mapping[str, Hazard]) -> BoundClock:
     path = ("clocks", k.name, "ratio")
     ratio = changer.formula(path, k.ratio)
     if ratio.is_const and ratio.value < 0:

@@ -20,13 +20,13 @@ _POSITIVE = {
 def bind_population(study: Study, numbers: Numbers) -> BoundPopulation:
     """The population every strategy shares."""
     attributes = tuple(
-        BoundAttribute(a.name, None if a.law is None else _law(a, a.law, numbers), a.levels, a.label)
+        BoundAttribute(a.name, None if a.law is None else _law(a, a.law, numbers=numbers), a.levels, a.label)
         for a in study.attributes
     )
     return BoundPopulation(attributes, study.correlation, study.rows)
 
 
-def _law(attribute: Attribute, spec: LawSpec, numbers: Numbers) -> Law:
+def _law(attribute: Attribute, spec: LawSpec, *, numbers: Numbers) -> Law:
     key = f"attributes.{attribute.name}"
     path = key if spec.kind == "constant" else f"{key}.{spec.kind}"
     p = {n: numbers.number(f, f"{path}.{n}") * spec.scales.get(n, 1.0) for n, f in spec.params.items()}

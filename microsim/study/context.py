@@ -55,10 +55,16 @@ class Context:
             return None
         path = self.root / name
         if not name or not path.is_file():
-            found = sorted(p.name for p in self.root.iterdir() if p.suffix.lower() == ".csv")
+            found = [
+                p.relative_to(self.root).as_posix() for p in (*self.root.glob("*.csv"), *self.root.glob("*/*.csv"))
+            ]
             self.fault(key, "there is no such file in the study folder", nearest(name, found), value=name)
             return None
-        text = decode(path.read_bytes())
+        try:
+            text = decode(path.read_bytes())
+        except OSError as e:
+            self.fault(key, f"the file cannot be read: {e.strerror}", "Check its permissions.", value=name)
+            return None
         if text is None:
             self.fault(key, "the file is not UTF-8 text", "Save it as CSV in UTF-8.", value=name)
             return None
@@ -84,10 +90,10 @@ class Context:
             at = f" (column {e.position})" if e.position else ""
             self.fault(key, e.problem + at, e.remedy, value=text)
             return NOT_A_NUMBER
-        self.check_dimension(formula, key, dim, remedy=remedy)
+        self.check_dimension(formula, key, dim=dim, remedy=remedy)
         return formula
 
-    def check_dimension(self, formula: Formula, key: str, dim: AnyDim, *, remedy: str = "") -> None:
+    def check_dimension(self, formula: Formula, key: str, *, dim: AnyDim, remedy: str = "") -> None:
         if dim is not None and formula.dim is not None and formula.dim != dim:
             problem = f"the formula gives {describe(formula.dim)} where {describe(dim)} is wanted"
             self.fault(key, problem, remedy or "Check the units of the inputs used.", value=formula.text)

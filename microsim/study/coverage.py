@@ -40,7 +40,7 @@ def possible_range(population: BoundPopulation, name: str) -> tuple[float, float
     return low, high
 
 
-def check_tables(ctx: Context, study: Study, population: BoundPopulation) -> None:
+def check_tables(ctx: Context, study: Study, *, population: BoundPopulation) -> None:
     """Each table must cover every age (or time) a patient can live through within the horizon."""
     years = study.years_per_unit
     for key, clock, spec in hazards_in_use(study):
@@ -67,6 +67,19 @@ def check_tables(ctx: Context, study: Study, population: BoundPopulation) -> Non
             )
 
 
+def names_in_formulas(study: Study) -> set[str]:
+    """Inputs and coefficients that any formula or input reads."""
+    formulas = [f for s in study.states for f in (s.start, s.utility, s.entry_qaly)]
+    formulas += [f for s in study.states for f in (*s.costs.values(), *s.entry_costs.values())]
+    formulas += [k.ratio for k in study.clocks]
+    formulas += [f for _, _, h in hazards_in_use(study) for f in (h.params or {}).values()]
+    formulas += [f for a in study.attributes if a.law for f in a.law.params.values()]
+    for s in study.strategies:
+        formulas += [*s.inputs.values(), *(d.formula for d in s.differences), *s.once.values()]
+    nodes = [f.node for f in formulas] + [i.node for i in study.inputs]
+    return {n.name for node in nodes for n in node.walk() if n.op == "input"}
+
+
 def check_use_of_fits(ctx: Context, study: Study) -> None:
     """A fit used for another transition than its own is possible, but worth a warning; so is one nobody uses."""
     fits = {f.name: f for f in study.fits}
@@ -81,6 +94,14 @@ def check_use_of_fits(ctx: Context, study: Study) -> None:
                 f"{key}: the fit {fit.name} is of {fit.source} to {fit.target}, "
                 f"the clock leads from {', '.join(clock.sources)} to {clock.target}"
             )
+    read = names_in_formulas(study)
+    for f in study.fits:
+        for c in f.coefficients:
+            if c not in read:
+                where = f"fits.{f.name}.covariates.{c}"
+                ctx.warnings.append(
+                    f"{where}: no formula uses {c}, so its covariate counts as 0 wherever the fit is used"
+                )
     for name in fits:
         if name not in used:
             ctx.warnings.append(f"fits.{name}: no clock uses this fit as its hazard")

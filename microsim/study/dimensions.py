@@ -83,6 +83,9 @@ def parse_unit(text: str, *, study_unit: str, money: str) -> tuple[float, Dim]:
     for i, group in enumerate(text.strip().split("/")):
         sign = 1 if i == 0 else -1
         for word in (w.strip() for w in group.split("*")):
+            # A probability per time does not scale with time as a rate does, so it is never converted.
+            if word == "probability" and text.strip() != word:
+                raise UnknownUnit(word)
             if word in PLAIN_UNITS:
                 continue
             if word == money:

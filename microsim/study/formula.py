@@ -105,7 +105,9 @@ def parse(text: str | float, scope: Scope) -> Formula:
     """Parse and check one formula; numbers pass through. Raises FormulaError."""
     if not isinstance(text, str):
         return Formula(repr(text), const(float(text)), None)
-    source = text.strip()
+    if "#" in text and "\n" in text.strip():
+        raise FormulaError("a comment inside a formula of several lines", "Put comments outside the formula.")
+    source = text.strip().replace("\n", " ")
     if not source:
         raise FormulaError("the formula is empty", "Write a number or a formula.")
     if len(source) > MAX_LENGTH:
@@ -113,11 +115,12 @@ def parse(text: str | float, scope: Scope) -> Formula:
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
-            # Parentheses let a formula run over several lines; their one column is taken off positions again.
-            tree = ast.parse(f"({source})", mode="eval")
-        typed = _Reader(scope).read(tree.body)
+            tree = ast.parse(source, mode="eval")
+        typed = _Reader(scope, source.encode()).read(tree.body)
     except SyntaxError as e:
-        raise FormulaError("this is not a formula", "Check operators and brackets.", position=_column(e)) from None
+        raise FormulaError(
+            "this is not a formula", "Check operators and brackets.", position=max(e.offset or 0, 0)
+        ) from None
     except (RecursionError, MemoryError):
         raise FormulaError("the formula is nested too deeply", "Split it into inputs.") from None
     except ValueError as e:
@@ -129,15 +132,11 @@ def parse(text: str | float, scope: Scope) -> Formula:
     return Formula(source, typed.node, typed.dim)
 
 
-def _column(error: SyntaxError) -> int:
-    return max((error.offset or 1) - 1, 0)
-
-
 class _Reader:
     """Walks Python's syntax tree; every node type not named here is refused."""
 
-    def __init__(self, scope: Scope) -> None:
-        self.scope = scope
+    def __init__(self, scope: Scope, source: bytes) -> None:
+        self.scope, self.source = scope, source
 
     def read(self, e: ast.expr) -> _Typed:
         if isinstance(e, ast.Constant):
@@ -162,7 +161,8 @@ class _Reader:
         raise self._error(e, f"{type(e).__name__} is not part of the formula language", "Use arithmetic only.")
 
     def _error(self, e: ast.expr, problem: str, remedy: str) -> FormulaError:
-        return FormulaError(problem, remedy, position=max(e.col_offset, 0))
+        # Python counts columns in bytes of UTF-8; people count letters.
+        return FormulaError(problem, remedy, position=len(self.source[: e.col_offset].decode(errors="ignore")) + 1)
 
     def number(self, e: ast.expr) -> _Typed:
         """A sub-formula that must be a number: words and categories are only ever compared."""
@@ -226,10 +226,10 @@ class _Reader:
             op = _COMPARE.get(type(op_type))
             if op is None:
                 raise self._error(e, f"{type(op_type).__name__} is not a comparison here", "Use < <= > >= == !=.")
-            parts.append(self._compared(op, (typed[i], typed[i + 1]), (sides[i], sides[i + 1])))
+            parts.append(self._compared(op, (typed[i], typed[i + 1]), where=(sides[i], sides[i + 1])))
         return self._chain("and", parts, e)
 
-    def _compared(self, op: str, pair: tuple[_Typed, _Typed], where: tuple[ast.expr, ast.expr]) -> _Typed:
+    def _compared(self, op: str, pair: tuple[_Typed, _Typed], *, where: tuple[ast.expr, ast.expr]) -> _Typed:
         words = [t for t in pair if t.text is not None]
         categories = [t for t in pair if t.levels]
         if not words and not categories:
@@ -310,5 +310,11 @@ class _Reader:
         try:
             dim = combine(op, [p.dim for p in parts], exponent=exponent)
         except DimensionMismatch as m:
-            raise self._error(e, str(m), "Check the units of the inputs used.") from None
+            raise self._error(e, str(m), self._unit_remedy(parts)) from None
         return _Typed(Node(op, tuple(p.node for p in parts)), dim)
+
+    def _unit_remedy(self, parts: list[_Typed]) -> str:
+        leaves = [n for p in parts for n in p.node.walk()]
+        if any((n.op == "attribute" and n.name == "age") or (n.name == "at_entry" and n.of == "age") for n in leaves):
+            return "Age is a plain number of years here: inputs beside it have the unit -."
+        return "Check the units of the inputs used."

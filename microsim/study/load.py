@@ -67,24 +67,25 @@ def _build(ctx: Context, text: StudyFile, *, folder: str) -> Study:
     rows_table = read_rows(ctx, text.population.from_)
     columns = frozenset(rows_table.cells) if rows_table is not None else frozenset()
     _check_names(ctx, text)
-    attributes = parse_attributes(ctx, text.attributes, columns)
+    attributes = parse_attributes(ctx, text.attributes, columns=columns)
     inputs = parse_inputs(ctx, inputs_table)
     hazards = HazardReader(ctx, text.fits, attributes)
     states = parse_states(ctx, text.states)
-    clocks = parse_clocks(ctx, text.clocks, hazards)
+    clocks = parse_clocks(ctx, text.clocks, hazards=hazards)
     strategies = parse_strategies(ctx, text.strategies, states=states, clocks=clocks, hazards=hazards)
-    check_graph(ctx, states, clocks)
+    check_graph(ctx, states, clocks=clocks)
     check_shared_patients(ctx, strategies, inputs=inputs, attributes=attributes, states=states)
     fits = parse_fits(ctx, text.fits)
-    horizon = settings.length(ctx, "horizon", text.horizon)
+    horizon = settings.length(ctx, "horizon", value=text.horizon)
     study = Study(
         text=text, folder=folder, content_hash="", defaults=(), warnings=(), lines=ctx.lines, files=(),
         time_unit=text.time, years_per_unit=ctx.years_per_unit, horizon=horizon, decision=settings.decision(ctx, text),
         discounting=settings.discounting(ctx, text), cohort=settings.cohort(ctx, text, horizon=horizon),
         patients=text.run.patients,
         seed=text.run.seed, inputs_file=text.inputs or "inputs.csv", inputs=inputs, attributes=attributes,
-        correlation=correlation_matrix(ctx, text.population, attributes),
-        rows=check_rows(ctx, rows_table, attributes, text.attributes), states=states, clocks=clocks, fits=fits,
+        correlation=correlation_matrix(ctx, text.population, attributes=attributes),
+        rows=check_rows(ctx, rows_table, attributes=attributes, tables=text.attributes),
+        states=states, clocks=clocks, fits=fits,
         strategies=strategies, categories=_categories(states, strategies),
     )  # fmt: skip
     return _finish(ctx, study)
@@ -95,7 +96,7 @@ def _finish(ctx: Context, study: Study) -> Study:
     found = FaultList()
     population = check_numbers(study, found).population
     ctx.adopt(found.faults)
-    check_tables(ctx, study, population)
+    check_tables(ctx, study, population=population)
     check_use_of_fits(ctx, study)
     settings.tell_defaults(ctx, study.text)
     return replace(
@@ -114,7 +115,7 @@ def _check_names(ctx: Context, text: StudyFile) -> None:
     ):
         for name in names:
             key = f"{what}s.{name}"
-            check_name(ctx, name, key, what)
+            check_name(ctx, name, key=key, what=what)
             if what in ("state", "attribute") and name in ctx.symbols:
                 ctx.fault(key, f"the name {name} is already an input or a coefficient", "Rename one of the two.")
             if what == "attribute" and name in text.states:

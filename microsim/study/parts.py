@@ -65,6 +65,7 @@ class HazardSpec:
 
     form: "" or how the parameters differ from the family's own ("mean", "probability"); per: for "probability", the
     period. edges, rates, by: of a table, in study units; beyond: whether its last rate continues.
+    unit: time unit as written, "" if none.
     """
 
     kind: str
@@ -78,6 +79,7 @@ class HazardSpec:
     rates: tuple[tuple[float, ...], ...] = ()
     file: str = ""
     beyond: bool = False
+    unit: str = ""
 
 
 @dataclass(frozen=True, slots=True)

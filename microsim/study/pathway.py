@@ -20,7 +20,7 @@ class PathwayNode:
 
 @dataclass(frozen=True, slots=True)
 class PathwayEdge:
-    """One clock out of one source. hazard: in words, e.g. "weibull", "fit home_stay", "table lifetable.csv"."""
+    """One clock out of one source. hazard: in words, e.g. "weibull, shape 1.3, scale 9 (days)", "fit home_stay"."""
 
     source: str
     target: str
@@ -44,9 +44,9 @@ def hazard_words(spec: HazardSpec) -> str:
         return f"fit {spec.fit}"
     if spec.kind == "table":
         return f"table {spec.file}" + (f" by {spec.by}" if spec.by else "")
-    if spec.form == "probability":
-        return "constant (from a probability)"
-    return "constant" if spec.kind == "exponential" else spec.kind
+    unit = f" per {spec.unit}" if spec.kind == "exponential" and spec.unit else f" ({spec.unit}s)" if spec.unit else ""
+    params = ", ".join(f"{name} {formula.text}" for name, formula in (spec.params or {}).items())
+    return f"{'constant' if spec.kind == 'exponential' else spec.kind}, {params}{unit}"
 
 
 def pathway(study: Study) -> PathwayGraph:

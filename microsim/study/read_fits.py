@@ -46,18 +46,18 @@ def parse_fits(ctx: Context, tables: Mapping[str, FitTable]) -> tuple[Fit, ...]:
     out = []
     for name, table in tables.items():
         if table.data not in files:
-            files[table.data] = _episodes(ctx, table.data, f"fits.{name}.data")
-        out.append(_fit(ctx, name, table, files[table.data]))
+            files[table.data] = _episodes(ctx, table.data, key=f"fits.{name}.data")
+        out.append(_fit(ctx, name, table=table, episodes=files[table.data]))
     return tuple(out)
 
 
-def _episodes(ctx: Context, file: str, key: str) -> Episodes | None:
+def _episodes(ctx: Context, file: str, *, key: str) -> Episodes | None:
     text = ctx.read(file, key)
     table = parse_csv(text, file=file, required=EPISODE_COLUMNS, faults=ctx.faults) if text is not None else None
     return None if table is None else read_episodes(table, states=ctx.states, faults=ctx.faults)
 
 
-def _fit(ctx: Context, name: str, table: FitTable, episodes: Episodes | None) -> Fit:
+def _fit(ctx: Context, name: str, *, table: FitTable, episodes: Episodes | None) -> Fit:
     key = f"fits.{name}"
     known = True
     if table.family not in PARAMETERS:
@@ -70,11 +70,11 @@ def _fit(ctx: Context, name: str, table: FitTable, episodes: Episodes | None) ->
     for field, value in (("unit", table.unit or ctx.study_unit), ("time", table.time)):
         if field not in table.model_fields_set:
             ctx.default(f"{key}.{field}", value)
-    task = _task(ctx, name, table, episodes) if known and episodes is not None else None
+    task = _task(ctx, name, table=table, episodes=episodes) if known and episodes is not None else None
     return Fit(name, table.family, table.from_, table.to, table.time, tuple(table.covariates), task)
 
 
-def _task(ctx: Context, name: str, table: FitTable, episodes: Episodes) -> FitTask | None:
+def _task(ctx: Context, name: str, *, table: FitTable, episodes: Episodes) -> FitTask | None:
     rows = [i for i, s in enumerate(episodes.source) if s == table.from_]
     start = np.array([episodes.entry[i] for i in rows])
     stop = np.array([episodes.exit[i] for i in rows])
@@ -88,7 +88,7 @@ def _task(ctx: Context, name: str, table: FitTable, episodes: Episodes) -> FitTa
         return None
     origin = start[kept] if table.time == "sojourn" else np.zeros(int(kept.sum()))
     at_risk = [i for i, k in zip(rows, kept, strict=True) if k]
-    covariates = _covariates(ctx, f"fits.{name}.covariates", table, episodes, at_risk)
+    covariates = _covariates(ctx, f"fits.{name}.covariates", table=table, episodes=episodes, rows=at_risk)
     if covariates is None:
         return None
     unit = table.unit or ctx.study_unit
@@ -104,7 +104,7 @@ def _task(ctx: Context, name: str, table: FitTable, episodes: Episodes) -> FitTa
     ))  # fmt: skip
 
 
-def _covariates(ctx: Context, key: str, table: FitTable, episodes: Episodes, rows: list[int]) -> F | None:
+def _covariates(ctx: Context, key: str, *, table: FitTable, episodes: Episodes, rows: list[int]) -> F | None:
     """float64[n, p], or None after a fault."""
     cells = {c: v for c, v in episodes.table.cells.items() if c not in _NOT_COVARIATES and name_problem(c) == ""}
     symbols = {c: Symbol("attribute", PLAIN, categories(v)) for c, v in cells.items()}

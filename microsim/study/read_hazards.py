@@ -47,16 +47,16 @@ class HazardReader:
             self.ctx.fault(key, problem, f"Use exactly one of {known}.", value=", ".join(kinds))
             return NO_HAZARD
         kind = kinds[0]
-        self._stray_keys(table, key, kind)
+        self._stray_keys(table, key, kind=kind)
         if kind == "fit":
-            return self._fit(table, key, scale)
+            return self._fit(table, key, scale=scale)
         if kind == "table":
-            return self._table(table, key, scale)
+            return self._table(table, key, scale=scale)
         if kind in ("rate", "probability"):
-            return self._constant(table, key, kind)
-        return self._family(table, key, kind)
+            return self._constant(table, key, kind=kind)
+        return self._family(table, key, family=kind)
 
-    def _stray_keys(self, table: HazardTable, key: str, kind: str) -> None:
+    def _stray_keys(self, table: HazardTable, key: str, *, kind: str) -> None:
         allowed = {"table": ("by", "unit", "beyond"), "fit": (), "probability": ("per",)}.get(kind, ("unit",))
         for name in ("per", "by", "beyond", "unit"):
             if getattr(table, name) is not None and name not in allowed:
@@ -64,7 +64,7 @@ class HazardReader:
                     f"{key}.{name}", f"{name} does not go with {kind}", "Remove it.", value=getattr(table, name)
                 )
 
-    def _fit(self, table: HazardTable, key: str, scale: str) -> HazardSpec:
+    def _fit(self, table: HazardTable, key: str, *, scale: str) -> HazardSpec:
         name = table.fit or ""
         if name not in self.fits:
             remedy = nearest(name, self.fits) if self.fits else "Add a table [fits.<name>]."
@@ -75,10 +75,10 @@ class HazardReader:
             self.ctx.fault(f"{key}.fit", problem, "Give both the same time.")
         return HazardSpec("fit", fit=name)
 
-    def _constant(self, table: HazardTable, key: str, kind: str) -> HazardSpec:
+    def _constant(self, table: HazardTable, key: str, *, kind: str) -> HazardSpec:
         if kind == "rate":
-            rate, scale = self._parameters({"rate": table.rate or 0}, key, "exponential", table.unit)
-            return HazardSpec("exponential", params=rate, scale=scale)
+            rate, scale = self._parameters({"rate": table.rate or 0}, key, family="exponential", unit=table.unit)
+            return HazardSpec("exponential", params=rate, scale=scale, unit=table.unit or "")
         formula = self.ctx.formula(table.probability or 0, f"{key}.probability", memory=False)
         if table.per is None:
             self.ctx.fault(f"{key}.per", "a probability needs the time it belongs to",
@@ -88,9 +88,15 @@ class HazardReader:
         if per <= 0:
             self.ctx.fault(f"{key}.per", "the time must be positive", "Correct it.", value=table.per.value)
             return NO_HAZARD
-        return HazardSpec("exponential", params={"probability": formula}, form="probability", per=per)
+        return HazardSpec(
+            "exponential",
+            params={"probability": formula},
+            form="probability",
+            per=per,
+            unit=f"{table.per.value:g} {table.per.unit}",
+        )
 
-    def _family(self, table: HazardTable, key: str, family: str) -> HazardSpec:
+    def _family(self, table: HazardTable, key: str, *, family: str) -> HazardSpec:
         raw: Mapping[str, Expression] = getattr(table, family)
         forms = [PARAMETERS[family], *([("mean", "sdlog")] if family == "lognormal" else [])]
         if not any(set(raw) == set(f) for f in forms):
@@ -99,11 +105,13 @@ class HazardReader:
                 f"{key}.{family}", f"{family} is given by {wanted}", "Give exactly these.", value=", ".join(raw)
             )
             return NO_HAZARD
-        params, scale = self._parameters(raw, f"{key}.{family}", family, table.unit, unit_key=f"{key}.unit")
-        return HazardSpec(family, params=params, form="mean" if "mean" in raw else "", scale=scale)
+        params, scale = self._parameters(raw, f"{key}.{family}", family=family, unit=table.unit, unit_key=f"{key}.unit")
+        return HazardSpec(
+            family, params=params, form="mean" if "mean" in raw else "", scale=scale, unit=table.unit or ""
+        )
 
     def _parameters(
-        self, raw: Mapping[str, Expression], key: str, family: str, unit: str | None, *, unit_key: str = ""
+        self, raw: Mapping[str, Expression], key: str, *, family: str, unit: str | None, unit_key: str = ""
     ) -> tuple[dict[str, Formula], float]:
         """Parsed parameters, and study units per time unit they are written in."""
         if unit is not None and unit not in YEARS:
@@ -125,7 +133,7 @@ class HazardReader:
                 out[name] = self.ctx.formula(expression, at, dim=PLAIN, memory=False, remedy=remedy)
         return out, 1.0 if unit is None else factor_between(unit, self.ctx.study_unit)
 
-    def _table(self, table: HazardTable, key: str, scale: str) -> HazardSpec:
+    def _table(self, table: HazardTable, key: str, *, scale: str) -> HazardSpec:
         name = table.table or ""
         if table.unit not in TABLE_UNITS:
             remedy = 'Write unit = "yearly probability" or unit = "yearly rate".'
@@ -145,7 +153,7 @@ class HazardReader:
             self.ctx.fault(f"{key}.table", "a clock on age needs an attribute named age", "Add [attributes.age].")
         cached = (name, table.by, table.unit)
         if cached not in self.tables:
-            self.tables[cached] = self._read_table(name, f"{key}.table", levels, table)
+            self.tables[cached] = self._read_table(name, f"{key}.table", levels=levels, table=table)
         life = self.tables[cached]
         if life is None:
             return NO_HAZARD
@@ -154,7 +162,7 @@ class HazardReader:
         rates = tuple(tuple(r * years for r in row) for row in life.rates)
         return HazardSpec("table", by=table.by, edges=edges, rates=rates, file=name, beyond=table.beyond == "hold")
 
-    def _read_table(self, name: str, key: str, levels: tuple[str, ...], table: HazardTable) -> LifeTable | None:
+    def _read_table(self, name: str, key: str, *, levels: tuple[str, ...], table: HazardTable) -> LifeTable | None:
         text = self.ctx.read(name, key)
         csv = parse_csv(text, file=name, required=("age",), faults=self.ctx.faults) if text is not None else None
         if csv is None:

@@ -55,8 +55,12 @@ def _unit(ctx: Context, unit: str, *, row: int, out: RowFaults | None = None) ->
         return ctx.unit(unit)
     except UnknownUnit as e:
         if out is not None:
+            problem = f"unknown unit {e.word!r}"
             remedy = nearest(e.word, (*UNITS, ctx.money)) + " Units are joined with * and /."
-            out.add("unit", f"unknown unit {e.word!r}", remedy, row=row, value=unit)
+            if e.word == "probability":
+                problem = "a probability has no other unit beside it"
+                remedy = "Give the unit probability, and its time as per = {...} in the hazard."
+            out.add("unit", problem, remedy, row=row, value=unit)
         return 1.0, PLAIN
 
 
@@ -71,12 +75,12 @@ def parse_inputs(ctx: Context, table: Csv | None) -> tuple[Input, ...]:
         if cells["name"] in ctx.symbols and cells["name"] not in found:
             found[cells["name"]] = _parse_row(ctx, cells, row=row, out=out)
     out.finish()
-    return _in_order(ctx, found, table.file)
+    return _in_order(ctx, found, file=table.file)
 
 
 def _parse_row(ctx: Context, cells: Mapping[str, str], *, row: int, out: RowFaults) -> Input:
     factor, dim = _unit(ctx, cells["unit"], row=row)
-    node = _value(ctx, cells, (factor, dim), row=row, out=out)
+    node = _value(ctx, cells, unit=(factor, dim), row=row, out=out)
     law = cells["law"] or "fixed"
     if law not in LAWS:
         out.add("law", f"unknown law {law!r}", nearest(law, LAWS), row=row)
@@ -98,7 +102,7 @@ def _parse_row(ctx: Context, cells: Mapping[str, str], *, row: int, out: RowFaul
     return made
 
 
-def _value(ctx: Context, cells: Mapping[str, str], unit: tuple[float, Dim], *, row: int, out: RowFaults) -> Node:
+def _value(ctx: Context, cells: Mapping[str, str], *, unit: tuple[float, Dim], row: int, out: RowFaults) -> Node:
     """The value as a tree in study units: bare numbers are converted, formulas over inputs already are in them."""
     text, (factor, dim) = cells["value"], unit
     plain = number(text)
@@ -141,7 +145,7 @@ def _interval_problems(made: Input) -> Iterator[tuple[str, str, str]]:
         yield "low", f"a {made.law} law lives above 0", "Correct the interval or choose another law."
 
 
-def _in_order(ctx: Context, found: Mapping[str, Input], file: str) -> tuple[Input, ...]:
+def _in_order(ctx: Context, found: Mapping[str, Input], *, file: str) -> tuple[Input, ...]:
     graph = {name: [n.name for n in i.node.walk() if n.op == "input" and n.name in found] for name, i in found.items()}
     try:
         return tuple(found[n] for n in TopologicalSorter(graph).static_order())

@@ -19,15 +19,16 @@ from microsim.study.schema import ClockTable, Expression, StateTable
 ZERO = Formula("0", const(0.0), None)
 ONE = Formula("1", const(1.0), None)
 FLOW_REMEDY = "A cost of a state is money per time: give its inputs a unit such as EUR/year."
+UTILITY_REMEDY = "A utility is QALYs per year of life: give its inputs the unit utility."
 LUMP_REMEDY = "A one-off cost is money: give its inputs the unit of the currency."
 
 
 def parse_states(ctx: Context, tables: Mapping[str, StateTable]) -> tuple[State, ...]:
     """States in order; unsaid keys go to the list of defaults."""
-    return tuple(_state(ctx, name, table) for name, table in tables.items())
+    return tuple(_state(ctx, name, table=table) for name, table in tables.items())
 
 
-def _state(ctx: Context, name: str, table: StateTable) -> State:
+def _state(ctx: Context, name: str, *, table: StateTable) -> State:
     key = f"states.{name}"
     dead = table.dead if table.dead is not None else table.absorbing
     if table.dead is None and table.absorbing:
@@ -35,7 +36,7 @@ def _state(ctx: Context, name: str, table: StateTable) -> State:
     if dead and not table.absorbing:
         ctx.fault(f"{key}.dead", "a dead state must be absorbing", "Add absorbing = true or remove dead.")
     if table.utility is not None:
-        utility = ctx.formula(table.utility, f"{key}.utility")
+        utility = ctx.formula(table.utility, f"{key}.utility", remedy=UTILITY_REMEDY)
     else:
         utility = ZERO
         if dead:
@@ -45,43 +46,43 @@ def _state(ctx: Context, name: str, table: StateTable) -> State:
                 f"{key}.utility", "the state has no utility", "Give QALYs per year of life, as number or formula."
             )
     return State(
-        name, table.label or name, _start(ctx, f"{key}.start", table.start), table.absorbing, dead, utility,
-        parse_costs(ctx, table.cost, f"{key}.cost", flow=True),
-        parse_costs(ctx, table.entry.cost, f"{key}.entry.cost", flow=False),
+        name, table.label or name, _start(ctx, f"{key}.start", value=table.start), table.absorbing, dead, utility,
+        parse_costs(ctx, table.cost, key=f"{key}.cost", flow=True),
+        parse_costs(ctx, table.entry.cost, key=f"{key}.entry.cost", flow=False),
         ZERO if table.entry.qaly is None else ctx.formula(table.entry.qaly, f"{key}.entry.qaly"),
     )  # fmt: skip
 
 
-def _start(ctx: Context, key: str, value: bool | Expression) -> Formula:
+def _start(ctx: Context, key: str, *, value: bool | Expression) -> Formula:
     if isinstance(value, bool):
         return ONE if value else ZERO
     return ctx.formula(value, key, memory=False)
 
 
 def parse_costs(
-    ctx: Context, costs: Mapping[str, Expression], key: str, *, flow: bool, memory: bool = True
+    ctx: Context, costs: Mapping[str, Expression], *, key: str, flow: bool, memory: bool = True
 ) -> dict[str, Formula]:
     """Category -> formula; flows are money per time, the others money."""
     out = {}
     for category, text in costs.items():
-        check_name(ctx, category, f"{key}.{category}", "cost category")
+        check_name(ctx, category, key=f"{key}.{category}", what="cost category")
         dim, remedy = (MONEY_PER_TIME, FLOW_REMEDY) if flow else (MONEY, LUMP_REMEDY)
         out[category] = ctx.formula(text, f"{key}.{category}", dim=dim, memory=memory, remedy=remedy)
     return out
 
 
-def check_name(ctx: Context, name: str, key: str, what: str) -> None:
+def check_name(ctx: Context, name: str, *, key: str, what: str) -> None:
     problem = name_problem(name)
     if problem:
         ctx.fault(key, f"the {what} {name!r} {problem}", "Choose another name.")
 
 
-def parse_clocks(ctx: Context, tables: Mapping[str, ClockTable], hazards: HazardReader) -> tuple[Clock, ...]:
+def parse_clocks(ctx: Context, tables: Mapping[str, ClockTable], *, hazards: HazardReader) -> tuple[Clock, ...]:
     """Clocks in order."""
-    return tuple(_clock(ctx, name, table, hazards) for name, table in tables.items())
+    return tuple(_clock(ctx, name, table=table, hazards=hazards) for name, table in tables.items())
 
 
-def _clock(ctx: Context, name: str, table: ClockTable, hazards: HazardReader) -> Clock:
+def _clock(ctx: Context, name: str, *, table: ClockTable, hazards: HazardReader) -> Clock:
     key = f"clocks.{name}"
     sources = tuple([table.from_] if isinstance(table.from_, str) else table.from_)
     for field, names in (("from", sources), ("to", (table.to,))):
@@ -106,7 +107,7 @@ def _clock(ctx: Context, name: str, table: ClockTable, hazards: HazardReader) ->
     )  # fmt: skip
 
 
-def check_graph(ctx: Context, states: tuple[State, ...], clocks: tuple[Clock, ...]) -> None:
+def check_graph(ctx: Context, states: tuple[State, ...], *, clocks: tuple[Clock, ...]) -> None:
     """Dead ends, exits from absorbing states and states nobody can reach. A start by formula counts as possible."""
     if not states:
         ctx.fault("states", "the study has no states", "Add tables [states.<name>].")

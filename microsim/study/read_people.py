@@ -30,18 +30,18 @@ _POWER = {"mean": 1, "sd": 1, "low": 1, "high": 1, "value": 1, "rate": -1}
 
 
 def parse_attributes(
-    ctx: Context, tables: Mapping[str, AttributeTable], columns: frozenset[str]
+    ctx: Context, tables: Mapping[str, AttributeTable], *, columns: frozenset[str]
 ) -> tuple[Attribute, ...]:
     """Attributes in order; each becomes a name for formulas. columns: those of the population file, if any."""
     out = []
     for name, table in tables.items():
-        attribute = _attribute(ctx, name, table, columns)
+        attribute = _attribute(ctx, name, table=table, columns=columns)
         out.append(attribute)
         ctx.symbols.setdefault(name, Symbol("attribute", attribute.dim, attribute.levels))
     return tuple(out)
 
 
-def _attribute(ctx: Context, name: str, table: AttributeTable, columns: frozenset[str]) -> Attribute:
+def _attribute(ctx: Context, name: str, *, table: AttributeTable, columns: frozenset[str]) -> Attribute:
     key = f"attributes.{name}"
     laws = [k for k in (*LAW_FORMS, "choice", "value") if getattr(table, k) is not None]
     if len(laws) > 1:
@@ -55,7 +55,7 @@ def _attribute(ctx: Context, name: str, table: AttributeTable, columns: frozense
         ctx.fault(f"{key}.levels", "levels are for columns of a population file", "List the levels in choice.")
     if len(set(levels)) < len(levels):
         ctx.fault(f"{key}.levels", "a level is named twice", "Remove one.", value=levels)
-    within = _within(ctx, f"{key}.within", table, categorical=bool(levels) or "value" in laws)
+    within = _within(ctx, f"{key}.within", table=table, categorical=bool(levels) or "value" in laws)
     if not laws:
         return Attribute(name, table.label, None, levels, PLAIN)
     kind = laws[0]
@@ -65,16 +65,16 @@ def _attribute(ctx: Context, name: str, table: AttributeTable, columns: frozense
         if not params:
             ctx.fault(f"{key}.choice", "no level is given", "Write for example { female = 0.5, male = 0.5 }.")
         return Attribute(name, table.label, LawSpec("choice", params, {}, None), levels, PLAIN)
-    _check_parameters(ctx, f"{key}.{kind}", kind, raw)
+    _check_parameters(ctx, f"{key}.{kind}", kind=kind, raw=raw)
     path = key if kind == "value" else f"{key}.{kind}"
     params = {n: ctx.formula(e, f"{path}.{n}", dim=None, memory=False) for n, e in raw.items()}
-    dim, scales = _dimension(ctx, path, params, is_age=name == "age")
+    dim, scales = _dimension(ctx, path, params=params, is_age=name == "age")
     return Attribute(
         name, table.label, LawSpec("constant" if kind == "value" else kind, params, scales, within), (), dim
     )
 
 
-def _within(ctx: Context, key: str, table: AttributeTable, *, categorical: bool) -> tuple[float, float] | None:
+def _within(ctx: Context, key: str, *, table: AttributeTable, categorical: bool) -> tuple[float, float] | None:
     if table.within is None:
         return None
     if categorical:
@@ -86,14 +86,14 @@ def _within(ctx: Context, key: str, table: AttributeTable, *, categorical: bool)
     return None
 
 
-def _check_parameters(ctx: Context, key: str, kind: str, raw: Mapping[str, Expression]) -> None:
+def _check_parameters(ctx: Context, key: str, *, kind: str, raw: Mapping[str, Expression]) -> None:
     forms = LAW_FORMS.get(kind)
     if forms and not any(set(raw) == set(f) for f in forms):
         wanted = " or ".join("{" + ", ".join(f) + "}" for f in forms)
         ctx.fault(key, f"a {kind} law is given by {wanted}", "Give exactly these.", value=", ".join(raw) or "nothing")
 
 
-def _dimension(ctx: Context, key: str, params: Mapping[str, Formula], *, is_age: bool) -> tuple[Dim, dict[str, float]]:
+def _dimension(ctx: Context, key: str, *, params: Mapping[str, Formula], is_age: bool) -> tuple[Dim, dict[str, float]]:
     """Dimension of what is drawn, and for age the factors that turn study time units into years."""
     dim: Dim | None = None
     scales: dict[str, float] = {}
@@ -103,7 +103,7 @@ def _dimension(ctx: Context, key: str, params: Mapping[str, Formula], *, is_age:
             continue
         own = formula.dim.power(Fraction(power)) if power else None
         if own is None:
-            ctx.check_dimension(formula, f"{key}.{name}", PLAIN)
+            ctx.check_dimension(formula, f"{key}.{name}", dim=PLAIN)
         elif dim is not None and own != dim:
             ctx.fault(
                 f"{key}.{name}", f"its unit does not agree with the other parameter's ({dim})", "Check the units."
@@ -128,7 +128,7 @@ def read_rows(ctx: Context, file: str | None) -> Csv | None:
 
 
 def check_rows(
-    ctx: Context, table: Csv | None, attributes: tuple[Attribute, ...], tables: Mapping[str, AttributeTable]
+    ctx: Context, table: Csv | None, *, attributes: tuple[Attribute, ...], tables: Mapping[str, AttributeTable]
 ) -> dict[str, tuple[float, ...]] | None:
     """Checked columns of the attributes without a law."""
     if table is None:
@@ -139,7 +139,7 @@ def check_rows(
 
 
 def correlation_matrix(
-    ctx: Context, population: PopulationTable, attributes: tuple[Attribute, ...]
+    ctx: Context, population: PopulationTable, *, attributes: tuple[Attribute, ...]
 ) -> tuple[tuple[float, ...], ...] | None:
     """Gaussian-copula matrix in the order of the attributes, or None if no correlation is stated."""
     if not population.correlation:

@@ -33,42 +33,47 @@ def parse_strategies(
             value=f"{len(tables)} strategy",
         )
     by_state, by_clock = {s.name: s for s in states}, {k.name: k for k in clocks}
-    return tuple(_strategy(ctx, n, t, by_state, by_clock, hazards) for n, t in tables.items())
+    return tuple(
+        _strategy(ctx, n, table=t, states=by_state, clocks=by_clock, hazards=hazards) for n, t in tables.items()
+    )
 
 
 def _strategy(
     ctx: Context,
     name: str,
+    *,
     table: StrategyTable,
     states: Mapping[str, State],
     clocks: Mapping[str, Clock],
     hazards: HazardReader,
 ) -> Strategy:
     key = f"strategies.{name}"
-    check_name(ctx, name, key, "strategy")
+    check_name(ctx, name, key=key, what="strategy")
     differences: list[Difference] = []
     replaced: dict[str, HazardSpec] = {}
     for state, change in table.states.items():
         if state not in states:
             ctx.fault(f"{key}.states.{state}", f"unknown state {state!r}", nearest(state, states))
         else:
-            differences += _state_differences(ctx, f"{key}.states.{state}", states[state], change)
+            differences += _state_differences(ctx, f"{key}.states.{state}", state=states[state], change=change)
     for clock, changed in table.clocks.items():
         at = f"{key}.clocks.{clock}"
         if clock not in clocks:
             ctx.fault(at, f"unknown clock {clock!r}", nearest(clock, clocks))
             continue
         if changed.ratio is not None:
-            differences += _difference(ctx, ("clocks", clock, "ratio"), changed.ratio, f"{at}.ratio", dim=PLAIN)
+            differences += _difference(
+                ctx, ("clocks", clock, "ratio"), value=changed.ratio, key=f"{at}.ratio", dim=PLAIN
+            )
         if changed.hazard is not None:
-            replaced[clock] = _hazard(ctx, f"{at}.hazard", clocks[clock], hazards, changed.hazard)
+            replaced[clock] = _hazard(ctx, f"{at}.hazard", clock=clocks[clock], hazards=hazards, table=changed.hazard)
     return Strategy(
-        name, table.label or name, _overrides(ctx, f"{key}.inputs", table.inputs), tuple(differences), replaced,
-        parse_costs(ctx, table.once.cost, f"{key}.once.cost", flow=False, memory=False),
+        name, table.label or name, _overrides(ctx, f"{key}.inputs", inputs=table.inputs), tuple(differences), replaced,
+        parse_costs(ctx, table.once.cost, key=f"{key}.once.cost", flow=False, memory=False),
     )  # fmt: skip
 
 
-def _hazard(ctx: Context, key: str, clock: Clock, hazards: HazardReader, table: HazardTable) -> HazardSpec:
+def _hazard(ctx: Context, key: str, *, clock: Clock, hazards: HazardReader, table: HazardTable) -> HazardSpec:
     spec = hazards.read(table, key, scale=clock.scale)
     if (spec.kind == "table") != (clock.hazard.kind == "table"):
         remedy = "Add a second clock and set the ratio of one of them to 0 in each strategy."
@@ -76,12 +81,14 @@ def _hazard(ctx: Context, key: str, clock: Clock, hazards: HazardReader, table: 
     return spec
 
 
-def _state_differences(ctx: Context, key: str, state: State, change: StateChange) -> Iterator[Difference]:
+def _state_differences(ctx: Context, key: str, *, state: State, change: StateChange) -> Iterator[Difference]:
     base = ("states", state.name)
     if change.utility is not None:
-        yield from _difference(ctx, (*base, "utility"), change.utility, f"{key}.utility", dim=PLAIN)
+        yield from _difference(ctx, (*base, "utility"), value=change.utility, key=f"{key}.utility", dim=PLAIN)
     if change.entry.qaly is not None:
-        yield from _difference(ctx, (*base, "entry", "qaly"), change.entry.qaly, f"{key}.entry.qaly", dim=PLAIN)
+        yield from _difference(
+            ctx, (*base, "entry", "qaly"), value=change.entry.qaly, key=f"{key}.entry.qaly", dim=PLAIN
+        )
     groups = (
         (("cost",), change.cost, state.costs, MONEY_PER_TIME, FLOW_REMEDY),
         (("entry", "cost"), change.entry.cost, state.entry_costs, MONEY, LUMP_REMEDY),
@@ -89,14 +96,14 @@ def _state_differences(ctx: Context, key: str, state: State, change: StateChange
     for where, costs, known, dim, remedy in groups:
         for category, value in costs.items():
             at = ".".join((key, *where, category))
-            check_name(ctx, category, at, "cost category")
+            check_name(ctx, category, key=at, what="cost category")
             if isinstance(value, Change) and value.times is not None and category not in known:
                 ctx.fault(f"{at}.times", f"the base has no cost {category} to multiply", nearest(category, known))
-            yield from _difference(ctx, (*base, *where, category), value, at, dim=dim, remedy=remedy)
+            yield from _difference(ctx, (*base, *where, category), value=value, key=at, dim=dim, remedy=remedy)
 
 
 def _difference(
-    ctx: Context, path: tuple[str, ...], value: Expression | Change, key: str, *, dim: Dim, remedy: str = ""
+    ctx: Context, path: tuple[str, ...], *, value: Expression | Change, key: str, dim: Dim, remedy: str = ""
 ) -> Iterator[Difference]:
     if not isinstance(value, Change):
         yield Difference(path, "set", ctx.formula(value, key, dim=dim, remedy=remedy))
@@ -108,7 +115,7 @@ def _difference(
         yield Difference(path, "plus", ctx.formula(value.plus, f"{key}.plus", dim=dim, remedy=remedy))
 
 
-def _overrides(ctx: Context, key: str, inputs: Mapping[str, Expression]) -> dict[str, Formula]:
+def _overrides(ctx: Context, key: str, *, inputs: Mapping[str, Expression]) -> dict[str, Formula]:
     known = {n: s for n, s in ctx.symbols.items() if s.op == "input"}
     out = {}
     for name, text in inputs.items():

@@ -14,7 +14,7 @@ from microsim.study.formula import nearest
 from microsim.study.schema import Duration, StudyFile
 
 
-def length(ctx: Context, key: str, value: float | Duration) -> float:
+def length(ctx: Context, key: str, *, value: float | Duration) -> float:
     """A length of time in study units; must be positive."""
     duration = value.value * factor_between(value.unit, ctx.study_unit) if isinstance(value, Duration) else float(value)
     if duration <= 0:
@@ -41,8 +41,7 @@ def decision(ctx: Context, text: StudyFile) -> Decision:
         if amount < 0:
             ctx.fault(f"decision.materiality.{name}", "a materiality cannot be negative", "Correct it.", value=amount)
     if d.materiality.share == 0 and d.materiality.amount == 0:
-        remedy = "Give a share or an amount above 0."
-        ctx.fault("decision.materiality", "a materiality of zero calls every difference material", remedy)
+        ctx.warnings.append("decision.materiality: it is zero, so no cohort model can be called adequate")
     if not 0 < d.alpha < 0.5:
         ctx.fault("decision.alpha", "alpha lies between 0 and 0.5", "Write for example 0.05.", value=d.alpha)
     comparator = d.comparator or (names[0] if names else "")
@@ -61,7 +60,7 @@ def discounting(ctx: Context, text: StudyFile) -> Discounting:
 
 
 def cohort(ctx: Context, text: StudyFile, *, horizon: float) -> CohortSettings:
-    cycle = length(ctx, "cohort.cycle", text.cohort.cycle)
+    cycle = length(ctx, "cohort.cycle", value=text.cohort.cycle)
     if cycle > horizon > 0:
         found = f"{cycle:g} against {horizon:g} {text.time}s"
         ctx.fault("cohort.cycle", "the cycle is longer than the horizon", "Shorten the cycle.", value=found)

@@ -60,6 +60,9 @@ def parse_csv(text: str, *, file: str, required: Sequence[str], faults: FaultLis
     rows: list[list[str]] = []
     try:
         header = [c.strip() for c in next(reader, [])]
+        if len(header) == 1 and ";" in header[0]:
+            out.add("header", "the columns are separated by semicolons", "Save the file with commas.", row=1)
+            return None
         for row in reader:
             if not any(c.strip() for c in row):
                 continue
@@ -73,11 +76,11 @@ def parse_csv(text: str, *, file: str, required: Sequence[str], faults: FaultLis
         out.add("row", f"the file is not readable as CSV: {e}", "Check the quotes.", row=reader.line_num)
         return None
     out.finish()
-    return _columns(header, numbers, rows, required=required, out=out)
+    return _columns(header, numbers, rows=rows, required=required, out=out)
 
 
 def _columns(
-    header: list[str], numbers: list[int], rows: list[list[str]], *, required: Sequence[str], out: RowFaults
+    header: list[str], numbers: list[int], *, rows: list[list[str]], required: Sequence[str], out: RowFaults
 ) -> Csv | None:
     missing = [c for c in required if c not in header]
     for column in missing:
@@ -285,14 +288,14 @@ def read_episodes(table: Csv, *, states: tuple[str, ...], faults: FaultList) -> 
             out.add(
                 "exit", "a transition at the moment of entry (sojourn of length zero)", remedy, row=row, value=exit_[i]
             )
-    _overlaps(table, entry, exit_, out)
+    _overlaps(table, entry, exit_=exit_, out=out)
     out.finish()
     if len(faults.faults) > before:
         return None
     return Episodes(table, table.cells["from"], target, entry, exit_, observed)
 
 
-def _overlaps(table: Csv, entry: tuple[float, ...], exit_: tuple[float, ...], out: RowFaults) -> None:
+def _overlaps(table: Csv, entry: tuple[float, ...], *, exit_: tuple[float, ...], out: RowFaults) -> None:
     latest: dict[str, tuple[float, int]] = {}
     for i in sorted(range(len(entry)), key=lambda i: (entry[i], exit_[i])):
         patient = table.cells["patient"][i]

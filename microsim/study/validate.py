@@ -59,9 +59,9 @@ def validate(raw: Raw, *, lines: Lines, faults: FaultList) -> StudyFile | None:
                 if not any(
                     f.file == STUDY_FILE and (f.key == key or f.key.startswith(key + ".")) for f in faults.faults
                 ):
-                    problem, remedy, value = _words(path, errors, data)
+                    problem, remedy, value = _words(path, errors, data=data)
                     faults.add(STUDY_FILE, key, problem, remedy, value=value, where=lines.where(key))
-                _repair(path, errors[0], data)
+                _repair(path, errors[0], data=data)
     return None
 
 
@@ -89,7 +89,7 @@ def _path(e: ErrorDetails, data: Raw) -> tuple[str, ...]:
     return tuple(path)
 
 
-def _words(path: tuple[str, ...], errors: list[ErrorDetails], data: Raw) -> tuple[str, str, object]:
+def _words(path: tuple[str, ...], errors: list[ErrorDetails], *, data: Raw) -> tuple[str, str, object]:
     """Problem, remedy and value of what pydantic found at one key."""
     e = errors[0]
     kind = e["type"]
@@ -156,7 +156,7 @@ def _step(annotation: Any, part: str) -> list[Any]:
     return opened
 
 
-def _repair(path: tuple[str, ...], e: ErrorDetails, data: Raw) -> None:
+def _repair(path: tuple[str, ...], e: ErrorDetails, *, data: Raw) -> None:
     """Take the faulty key (or the list it stands in) out, or put a stand-in where a key is missing."""
     here: Any = data
     for part in path[:-1]:

@@ -7,10 +7,11 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from study_builder import write_study
+
 from microsim.errors import Fault, InputError
 from microsim.study.load import load_study
 from microsim.study.parts import Study
-from study_builder import write_study
 
 Loader = Callable[..., Study]
 Faulter = Callable[..., list[Fault]]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import pytest
+
 from microsim.study.dimensions import (
     MONEY,
     MONEY_PER_TIME,
@@ -44,4 +45,9 @@ def test_unknown_units_are_refused(text: str) -> None:
 
 
 def test_a_dimension_reads_as_words() -> None:
-    assert [str(d) for d in (PLAIN, MONEY, MONEY_PER_TIME, PER_TIME)] == ["a plain number", "money", "money / time", "1 / time"]
+    assert [str(d) for d in (PLAIN, MONEY, MONEY_PER_TIME, PER_TIME)] == [
+        "a plain number",
+        "money",
+        "money / time",
+        "1 / time",
+    ]
