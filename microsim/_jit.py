@@ -15,6 +15,8 @@ from importlib import metadata
 from pathlib import Path
 from typing import Any, TypeVar
 
+from microsim.cache import cache_root
+
 _PACKAGE = Path(__file__).parent
 _KERNEL_ROOMS = ("hazards", "engine")
 
@@ -27,9 +29,7 @@ def cache_folder() -> Path:
     for library in ("numba", "llvmlite", "numpy"):
         digest.update(f"{library}={metadata.version(library)};".encode())
     digest.update(sys.version.encode())
-    base = os.environ.get("MICROSIM_CACHE") or os.environ.get("LOCALAPPDATA") or os.environ.get("XDG_CACHE_HOME")
-    root = Path(base) if base else Path.home() / ".cache"
-    return root / "microsim" / digest.hexdigest()[:16]
+    return cache_root() / "kernels" / digest.hexdigest()[:16]
 
 
 FOLDER = cache_folder()

@@ -20,7 +20,6 @@ import pandas as pd
 
 import microsim
 from microsim.comparison.ladder import Comparison, compare
-from microsim.economics.verdict_words import headline_of
 from microsim.errors import Fault, InputError
 from microsim.fitting.transition import FittedTransition, fit_transition
 from microsim.records.simulation import SimulationRecord

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from microsim.engine import population, queue, tally
+from microsim.engine import moments, population, queue, tally
 from microsim.engine.workspace import Workspace
 from microsim.errors import SimulationError
 from microsim.program import FieldTable, Program
@@ -47,6 +47,7 @@ class ChunkResult:
     """
 
     index: int
+    layout: Layout
     patients: int
     mean: F
     within: F
@@ -168,19 +169,22 @@ class ChunkRunner:
             if plan.keep_log:
                 logs.append(self._sojourns())
         values = np.stack(outcomes)
-        mean = values.mean(axis=2)
-        centred = values - mean[:, :, None]
-        money = np.stack([centred[:, plan.layout.outcomes.index(o)] for o in ("cost_disc", "qaly_disc")], axis=1)
-        money = money.reshape(-1, patients)
+        kept = values.copy() if plan.keep_outcomes else None
+        arms, names = len(plan.programs), plan.layout.outcomes
+        mean, money = np.empty((arms, len(names))), np.empty((2 * arms, 2 * arms))
+        within = np.empty((len(names), arms, arms))
+        columns = np.array([names.index(o) for o in ("cost_disc", "qaly_disc")])
+        moments.chunk_moments(values, columns, mean, within, money)
         return ChunkResult(
             index=index,
+            layout=plan.layout,
             patients=patients,
             mean=mean,
-            within=np.einsum("xmn,ymn->mxy", centred, centred),
-            money=np.einsum("in,jn->ij", money, money),
+            within=within,
+            money=money,
             start=np.bincount(start, minlength=len(plan.layout.states)).astype(np.float64),
             paths=tuple(paths),
             hazards=hazards,
             log=tuple(logs),
-            outcomes=values if plan.keep_outcomes else None,
+            outcomes=kept,
         )

@@ -10,6 +10,7 @@ import numpy.typing as npt
 from scipy import special
 
 from microsim import rng
+from microsim.engine.draws import draw_uniforms
 from microsim.study.bound import BoundArm, BoundPopulation, Law
 
 F = npt.NDArray[np.float64]
@@ -55,11 +56,19 @@ def _draw_attribute(law: Law, u: F) -> F:
     return np.clip(_quantile(law, p_low + (p_high - p_low) * u), low, high)
 
 
+def _uniforms(patients: npt.NDArray[np.int64], *, seed: int, stream: int, draw: int) -> F:
+    """``rng.uniforms`` by the compiled generator."""
+    out = np.empty(patients.size)
+    key = np.uint64(seed & 0xFFFFFFFF), np.uint64(seed >> 32)
+    draw_uniforms(*key, patients.astype(np.uint64), np.uint64(stream), np.uint64(draw), out)
+    return out
+
+
 def sample(population: BoundPopulation, patients: npt.NDArray[np.int64], *, seed: int, draw: int = 0) -> F:
     """Attributes of the numbered patients, float64[attribute, patient]; categories as codes."""
     out = np.empty((len(population.attributes), patients.size))
     uniforms = [
-        rng.uniforms(patients, seed=seed, stream=rng.stream_id("attribute", a.name), draw=draw)
+        _uniforms(patients, seed=seed, stream=rng.stream_id("attribute", a.name), draw=draw)
         for a in population.attributes
     ]
     if population.correlation is not None:
@@ -67,8 +76,9 @@ def sample(population: BoundPopulation, patients: npt.NDArray[np.int64], *, seed
         uniforms = list(np.clip(special.ndtr(normals), 2.0**-53, 1.0 - 2.0**-53))
     chosen = None
     if population.rows:
-        u = rng.uniforms(patients, seed=seed, stream=rng.stream_id("attribute", "row"), draw=draw)
-        chosen = np.minimum((u * len(next(iter(population.rows.values())))).astype(np.int64), len(next(iter(population.rows.values()))) - 1)
+        u = _uniforms(patients, seed=seed, stream=rng.stream_id("attribute", "row"), draw=draw)
+        rows = len(next(iter(population.rows.values())))
+        chosen = np.minimum((u * rows).astype(np.int64), rows - 1)
     for i, attribute in enumerate(population.attributes):
         if attribute.law is None:
             assert chosen is not None and population.rows is not None
@@ -84,5 +94,5 @@ def sample_start(arm: BoundArm, patients: npt.NDArray[np.int64], *, seed: int, d
     certain = np.flatnonzero(probabilities == 1.0)
     if certain.size == 1:
         return np.full(patients.size, certain[0], dtype=np.int64)
-    u = rng.uniforms(patients, seed=seed, stream=rng.stream_id("start", "state"), draw=draw)
+    u = _uniforms(patients, seed=seed, stream=rng.stream_id("start", "state"), draw=draw)
     return np.minimum(np.searchsorted(np.cumsum(probabilities), u, side="right"), len(arm.states) - 1).astype(np.int64)

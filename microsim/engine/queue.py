@@ -15,7 +15,7 @@ from microsim.engine.draws import draw_thresholds
 from microsim.engine.tape import run_tape
 from microsim.hazards import kernels, vmath
 
-BLOCK = 512
+BLOCK = 1024
 FIXED = 3  # memory rows before the study's own: entry time, discount integral for costs, for effects
 OK, LOG_FULL, BAD_FORMULA, RUNAWAY = range(4)
 MAX_EVENTS = 100_000.0  # per patient, on average over a chunk
