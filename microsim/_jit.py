@@ -13,7 +13,7 @@ import sys
 from collections.abc import Callable
 from importlib import metadata
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, TypeVar, cast
 
 from microsim.cache import cache_root
 
@@ -45,30 +45,32 @@ numba.config.CACHE_DIR = os.environ["NUMBA_CACHE_DIR"]
 Kernel = TypeVar("Kernel", bound=Callable[..., Any])
 
 
+_COMMON: dict[str, Any] = {"error_model": "numpy", "nogil": True}
+_INNER: dict[str, Any] = {**_COMMON, "no_cpython_wrapper": True, "no_cfunc_wrapper": True}
+
+
+def _compile(function: Kernel, options: dict[str, Any]) -> Kernel:
+    return cast(Kernel, numba.njit(**options)(function))
+
+
 def helper(function: Kernel) -> Kernel:
     """Compiled where it is used; not cached on its own, so one cached entry holds the whole call tree."""
-    compiled: Kernel = numba.njit(error_model="numpy", nogil=True, no_cpython_wrapper=True, no_cfunc_wrapper=True)(function)
-    return compiled
+    return _compile(function, _INNER)
 
 
 def spliced(function: Kernel) -> Kernel:
     """A step of a kernel that is pasted into its caller before compilation, so that the optimiser sees it once."""
-    compiled: Kernel = numba.njit(error_model="numpy", nogil=True, inline="always")(function)
-    return compiled
+    return _compile(function, {**_COMMON, "inline": "always"})
 
 
 def inlined(function: Kernel) -> Kernel:
     """A scalar helper that must disappear into its caller's loop so that the loop can be vectorised."""
-    compiled: Kernel = numba.njit(
-        error_model="numpy", nogil=True, forceinline=True, no_cpython_wrapper=True, no_cfunc_wrapper=True
-    )(function)
-    return compiled
+    return _compile(function, {**_INNER, "forceinline": True})
 
 
 def entry(function: Kernel) -> Kernel:
     """A kernel that Python calls: cached on disk, releases the interpreter lock."""
-    compiled: Kernel = numba.njit(error_model="numpy", nogil=True, cache=True)(function)
-    return compiled
+    return _compile(function, {**_COMMON, "cache": True})
 
 
 def is_warm() -> bool:

@@ -73,9 +73,13 @@ def _checked(study: Study, patients: int | None, seed: int | None, threads: int 
     k = (os.cpu_count() or 1) if threads is None else threads
     faults = []
     if not 200 <= n < 2**32:
-        faults.append(Fault("command line", "--patients", "out of range", "Give 200 to 4,294,967,295 patients.", str(n)))
+        faults.append(
+            Fault("command line", "--patients", "out of range", "Give 200 to 4,294,967,295 patients.", str(n))
+        )
     if not 0 <= s < 2**64:
-        faults.append(Fault("command line", "--seed", "out of range", "Give a whole number from 0 to 2**64 - 1.", str(s)))
+        faults.append(
+            Fault("command line", "--seed", "out of range", "Give a whole number from 0 to 2**64 - 1.", str(s))
+        )
     if not 1 <= k <= 1024:
         faults.append(Fault("command line", "--threads", "out of range", "Give 1 to 1024 threads.", str(k)))
     if faults:
@@ -84,8 +88,11 @@ def _checked(study: Study, patients: int | None, seed: int | None, threads: int 
 
 
 def _labels(study: Study) -> dict[str, dict[str, str]]:
-    groups = {"strategies": study.strategies, "states": study.states, "clocks": study.clocks}
-    return {kind: {x.name: x.label or x.name for x in items} for kind, items in groups.items()}
+    return {
+        "strategies": {x.name: x.label or x.name for x in study.strategies},
+        "states": {x.name: x.label or x.name for x in study.states},
+        "clocks": {x.name: x.label or x.name for x in study.clocks},
+    }
 
 
 def _records(table: pd.DataFrame) -> list[dict[str, Any]]:
@@ -94,9 +101,38 @@ def _records(table: pd.DataFrame) -> list[dict[str, Any]]:
     return [{str(k): v for k, v in row.items()} for row in plain.to_dict("records")]
 
 
-def _summary(study: Study, comparison: Comparison, settings: Mapping[str, Any]) -> dict[str, Any]:
+def _fits_table(fits: Mapping[str, FittedTransition]) -> pd.DataFrame:
+    """One row per estimate: natural value, and working-scale value with standard error."""
+    columns = [
+        "fit",
+        "source",
+        "target",
+        "family",
+        "time_unit",
+        "name",
+        "value",
+        "working_name",
+        "working",
+        "working_se",
+    ]
+    columns += ["loglik", "aic", "bic", "subjects", "events"]
+    rows = []
+    for name, f in fits.items():
+        errors = f.fit.standard_errors
+        values = {**f.fit.params, **f.fit.coefficients}
+        for (natural, value), working_name, working in zip(
+            values.items(), f.fit.working_names, f.fit.working, strict=True
+        ):
+            head = (name, f.source, f.target, f.fit.family, f.unit, natural, value, working_name, working)
+            quality = (errors[working_name], f.fit.loglik, f.fit.aic, f.fit.bic, f.fit.n, f.fit.n_events)
+            rows.append((*head, *quality))
+    return pd.DataFrame(rows, columns=columns)
+
+
+def _summary(
+    study: Study, comparison: Comparison, tables: Mapping[str, pd.DataFrame], settings: Mapping[str, Any]
+) -> dict[str, Any]:
     """The run as plain data; README lists the keys."""
-    tables = comparison.tables
     return {
         "title": study.title,
         "invented": study.text.invented,
@@ -161,6 +197,7 @@ def run(
     with clock.stage("compare"):
         tell("compare", 0, 1)
         comparison = compare(bound, record)
+    tables = {**comparison.tables, "fits": _fits_table(fits)}
     settings = {"patients": n, "seed": s, "cycle": bound.cohort.cycle, "correction": bound.cohort.correction}
     manifest = {
         "study": study.folder,
@@ -183,7 +220,7 @@ def run(
         comparison=comparison,
         fits=fits,
         pathway=pathway(study),
-        tables=comparison.tables,
-        summary=_summary(study, comparison, settings),
+        tables=tables,
+        summary=_summary(study, comparison, tables, settings),
         manifest=manifest,
     )

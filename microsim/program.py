@@ -356,7 +356,9 @@ class _ArmCompiler:
             return
         sums = self.acc.get("flow", r), self.acc.get("flow_disc", r)
         self.flow.append((int(row), *sums, int(r == 0)))
-        self._check(f"cost {self.study.categories[r - 1]}" if r else "utility", self.arm.states[s], node, int(row), False)
+        self._check(
+            f"cost {self.study.categories[r - 1]}" if r else "utility", self.arm.states[s], node, int(row), False
+        )
         for plain, discounted in self._outcomes_of(r):
             self.acc.weights[plain][sums[0]] = self.acc.weights[discounted][sums[1]] = unit
 

@@ -53,6 +53,8 @@ def uniforms(
     return (bits.astype(np.float64) + 0.5) * 2.0**-52
 
 
-def thresholds(patient: npt.ArrayLike, *, seed: int, clock: str, firing: npt.ArrayLike = 0, draw: int = 0) -> npt.NDArray[np.float64]:
+def thresholds(
+    patient: npt.ArrayLike, *, seed: int, clock: str, firing: npt.ArrayLike = 0, draw: int = 0
+) -> npt.NDArray[np.float64]:
     """Unit-exponential thresholds -log(u) of a clock, float64[n]; firing 0 is the first."""
     return -np.log(uniforms(patient, seed=seed, stream=stream_id("clock", clock), firing=firing, draw=draw))

@@ -41,7 +41,8 @@ def main(argv: Sequence[str] | None = None) -> int:
     """Run one verb; returns the exit code."""
     arguments = build_parser().parse_args(argv)
     try:
-        return VERBS[arguments.verb].run(arguments)
+        code: int = VERBS[arguments.verb].run(arguments)
+        return code
     except InputError as error:
         report_faults(error)
         return error.exit_code

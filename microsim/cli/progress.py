@@ -5,7 +5,7 @@ from __future__ import annotations
 from types import TracebackType
 
 from rich.console import Console
-from rich.progress import BarColumn, MofNCompleteColumn, TextColumn, TimeRemainingColumn
+from rich.progress import BarColumn, MofNCompleteColumn, TaskID, TextColumn, TimeRemainingColumn
 from rich.progress import Progress as Bars
 
 STAGES = {
@@ -20,15 +20,24 @@ class Progress:
     """``update(stage, done, total)`` from one thread; a context manager."""
 
     def __init__(self, console: Console) -> None:
-        columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn("{task.fields[rate]}"))
-        self.bars = Bars(*columns, TimeRemainingColumn(), console=console, transient=True, disable=not console.is_terminal)
-        self.tasks: dict[str, int] = {}
+        columns = (
+            TextColumn("{task.description}"),
+            BarColumn(),
+            MofNCompleteColumn(),
+            TextColumn("{task.fields[rate]}"),
+        )
+        self.bars = Bars(
+            *columns, TimeRemainingColumn(), console=console, transient=True, disable=not console.is_terminal
+        )
+        self.tasks: dict[str, TaskID] = {}
 
     def __enter__(self) -> Progress:
         self.bars.start()
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
         self.bars.stop()
 
     def update(self, stage: str, done: int, total: int) -> None:

@@ -8,11 +8,10 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from contextlib import ExitStack
+    from pathlib import Path
 
     from rich.console import Console
 
-    from microsim.cache import cache_root
-    from microsim.cli.progress import Progress
     from microsim.pipeline import Result
     from microsim.study.parts import Study
 
@@ -31,8 +30,12 @@ def add_parser(subparsers: Any) -> None:
     parser.add_argument("--patients", type=int, metavar="N", help="patients per strategy (default: the study's)")
     parser.add_argument("--seed", type=int, metavar="S", help="seed of the random numbers (default: the study's)")
     parser.add_argument("--threads", type=int, metavar="K", help="threads (default: all cores)")
-    parser.add_argument("--json", action="store_true", help="print the whole summary as one JSON object to standard output")
-    parser.add_argument("--keep-histories", action="store_true", help="also write every sojourn of every patient (Parquet)")
+    parser.add_argument(
+        "--json", action="store_true", help="print the whole summary as one JSON object to standard output"
+    )
+    parser.add_argument(
+        "--keep-histories", action="store_true", help="also write every sojourn of every patient (Parquet)"
+    )
     parser.add_argument("--keep-patients", action="store_true", help="also write every patient's outcomes (Parquet)")
 
 

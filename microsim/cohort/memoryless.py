@@ -108,7 +108,9 @@ def run_exact(generator: F, *, edges: F, start: F, timing: Timing) -> Occupancy:
         elif timing.annual:
             discounted[force] = time * factor
         else:
-            discounted[force] = np.einsum("...ti,...tij->...tj", before, _integrals(generator, width, force)[1]) * factor
+            discounted[force] = (
+                np.einsum("...ti,...tij->...tj", before, _integrals(generator, width, force)[1]) * factor
+            )
     at_edges = np.searchsorted(fine, edges - 1e-9 * edges[-1])
     return Occupancy(
         probability=probability[..., at_edges, :],

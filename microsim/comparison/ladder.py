@@ -12,11 +12,19 @@ import numpy.typing as npt
 import pandas as pd
 
 from microsim.comparison import words
-from microsim.comparison.cohorts import ALL_RULES, CONTINUOUS, USES, Cohorts, run_cohorts
+from microsim.comparison.cohorts import ALL_RULES, USES, Cohorts, run_cohorts
 from microsim.comparison.gap import split_gaps
 from microsim.comparison.jackknife import Jackknife
 from microsim.comparison.verdict import (
-    Decision, Test, Verdict, benefits, cohort_se, overall, paired_se, run_decisions, run_tests,
+    Decision,
+    Test,
+    Verdict,
+    benefits,
+    cohort_se,
+    overall,
+    paired_se,
+    run_decisions,
+    run_tests,
 )  # fmt: skip
 from microsim.economics.frontier import incremental_analysis
 from microsim.economics.net_benefit import choose, money_weights
@@ -71,8 +79,8 @@ class _Tables:
         for x, strategy in enumerate(self.names):
             for i, outcome in enumerate(self.layout.outcomes):
                 head = {"strategy": strategy, "model": INDIVIDUAL, "cycle_rule": "", "outcome": outcome}
-                se = math.sqrt(max(m.covariance[i, x, x], 0.0) / m.patients)
-                rows.append({**head, "unit": self._unit(outcome), "mean": m.mean[x, i], "standard_error": se})
+                error = math.sqrt(max(m.covariance[i, x, x], 0.0) / m.patients)
+                rows.append({**head, "unit": self._unit(outcome), "mean": m.mean[x, i], "standard_error": error})
         for model, rule, values in self._models():
             se = self.jackknife.standard_error(values)
             for x, strategy in enumerate(self.names):
@@ -207,7 +215,11 @@ def _causes(gap: pd.DataFrame, test: Test, correction: str) -> dict[str, float]:
         & (gap.use == "carried")
         & (gap.cycle_rule == correction)
     ].iloc[0]
-    return {"memory within a strategy": chosen.memory, "carrying rates": chosen.carrying, "cycle arithmetic": chosen.cycle}
+    return {
+        "memory within a strategy": chosen.memory,
+        "carrying rates": chosen.carrying,
+        "cycle arithmetic": chosen.cycle,
+    }
 
 
 def _sentences(

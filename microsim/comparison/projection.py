@@ -74,7 +74,9 @@ def project(record: SimulationRecord, *, path: int, arm: int, background: tuple[
     return Projection(
         rates=rates,
         rewards=_safe_ratio(leave_one_out(tally.reward).sum(axis=-1), by_state[:, None, :]),
-        lumps=_safe_ratio(leave_one_out(tally.lump).sum(axis=-1), leave_one_out(paths.entries).sum(axis=-1)[:, None, :]),
+        lumps=_safe_ratio(
+            leave_one_out(tally.lump).sum(axis=-1), leave_one_out(paths.entries).sum(axis=-1)[:, None, :]
+        ),
         supported=stable,
     )
 

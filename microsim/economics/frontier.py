@@ -49,7 +49,9 @@ def _slope(a: tuple[str, float, float], b: tuple[str, float, float]) -> float:
     return (b[1] - a[1]) / (b[2] - a[2])
 
 
-def incremental_analysis(strategies: Sequence[str], costs: Sequence[float], qalys: Sequence[float]) -> tuple[Position, ...]:
+def incremental_analysis(
+    strategies: Sequence[str], costs: Sequence[float], qalys: Sequence[float]
+) -> tuple[Position, ...]:
     """Positions in order of cost. A pair along the frontier is compared with its neighbour, never with everything."""
     points = list(zip(strategies, map(float, costs), map(float, qalys), strict=True))
     kept, dominated = _undominated(points)

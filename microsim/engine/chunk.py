@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from microsim.engine import moments, population, queue, tally
+from microsim.engine import columns, moments, population, queue, tally
 from microsim.engine.workspace import Workspace
 from microsim.errors import SimulationError
 from microsim.program import FieldTable, Program
@@ -102,10 +102,10 @@ class ChunkRunner:
                 program.arrays, *self.key, first, n, attributes, start, ws.memory, ws.remaining, ws.accumulators, ws.rows,
                 ws.x, ws.ints, ws.words, ws.waiting, ws.counts, ws.present, ws.log_index, ws.log_value, ws.status,
             )  # fmt: skip
-            if ws.status[0] != queue.LOG_FULL:
+            if ws.status[0] != columns.LOG_FULL:
                 break
             ws.resize_log(2 * ws.log_value.shape[1])
-        if ws.status[0] != queue.OK:
+        if ws.status[0] != columns.OK:
             self._fail(arm, first, attributes)
         out = np.empty((len(self.plan.layout.outcomes), n))
         sums = program.outcomes
@@ -116,9 +116,9 @@ class ChunkRunner:
         """Turn the workspace's status into an exception that names patient, state, formula and memory."""
         ws, plan = self._workspace(), self.plan
         name = plan.layout.strategies[arm]
-        if ws.status[0] == queue.RUNAWAY:
+        if ws.status[0] == columns.RUNAWAY:
             raise SimulationError(
-                f"strategy {name}: more than {queue.MAX_EVENTS:,.0f} events a patient; some clocks fire again and again in "
+                f"strategy {name}: more than {columns.MAX_EVENTS:,.0f} events a patient; some clocks fire again and again in "
                 "almost no time. Check hazards and their time units."
             )
         i = int(ws.status[1])

@@ -11,6 +11,7 @@ from collections import deque
 from collections.abc import Callable, Iterator
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -58,7 +59,7 @@ def _cuts(patients: int) -> list[tuple[int, int]]:
     """(first patient, patients) of every chunk; the number of chunks is a multiple of the number of groups."""
     chunks = GROUPS * max(1, -(-patients // (GROUPS * CHUNK)))
     edges = [patients * i // chunks for i in range(chunks + 1)]
-    return [(a, b - a) for a, b in zip(edges, edges[1:], strict=False) if b > a]
+    return [(a, b - a) for a, b in pairwise(edges) if b > a]
 
 
 class _Totals:
@@ -142,7 +143,7 @@ class _Totals:
         )
 
 
-def make_plan(study: BoundStudy, *, patients: int, seed: int, draw: int = 0, wants: Wants = Wants()) -> Plan:  # noqa: B008
+def make_plan(study: BoundStudy, *, patients: int, seed: int, draw: int = 0, wants: Wants = Wants()) -> Plan:
     """Compile every arm and fix grids and chunk size. Raises SimulationError for sizes out of range."""
     if not 40 <= patients < 2**32:
         raise SimulationError(f"patients must be at least 40 and below 2**32 (found {patients})")
@@ -201,7 +202,7 @@ def simulate(
     seed: int,
     draw: int = 0,
     threads: int = 1,
-    wants: Wants = Wants(),  # noqa: B008
+    wants: Wants = Wants(),
     progress: Progress | None = None,
 ) -> SimulationRecord:
     """Run every arm on the same patients.

@@ -10,9 +10,22 @@ from __future__ import annotations
 import numpy as np
 
 from microsim._jit import entry, helper, spliced
-from microsim.engine.queue import (
-    ARC, ARC_END, BY, FAMILY, GATHER, GATHER_END, LEVEL, RATIO, SCALE, STRIDE, TAPE, TAPE_END, TARGET, TRIVIAL,
-    fill_level, fill_origin, fill_rows,
+from microsim.engine.clocks import fill_level, fill_origin, fill_rows
+from microsim.engine.columns import (
+    ARC,
+    ARC_END,
+    BY,
+    FAMILY,
+    GATHER,
+    GATHER_END,
+    LEVEL,
+    RATIO,
+    SCALE,
+    STRIDE,
+    TAPE,
+    TAPE_END,
+    TARGET,
+    TRIVIAL,
 )  # fmt: skip
 from microsim.engine.tape import run_tape
 from microsim.hazards import kernels
@@ -59,7 +72,9 @@ def _present(edges, row, t0, c0, t1, c1, leaves):
 
 
 @entry
-def tally_paths(p, log_index, log_value, n_blocks, time, sojourn, present, full, part, entries, events, full_d, part_d, events_d):
+def tally_paths(
+    p, log_index, log_value, n_blocks, time, sojourn, present, full, part, entries, events, full_d, part_d, events_d
+):
     """Occurrence and exposure of all logged sojourns, added to the given arrays.
 
     present float64[s, T+2]; full, part float64[s, T+1] (see ``exposure_of``); entries float64[s, T]; events
@@ -218,7 +233,9 @@ def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, 
             else:
                 others += 1
         if others > 0:
-            _integrate_arcs(p, s, time, x[0], x[1], idx, level, attributes, x, lane, cell, end, levels, c, h, integrated, w)
+            _integrate_arcs(
+                p, s, time, x[0], x[1], idx, level, attributes, x, lane, cell, end, levels, c, h, integrated, w
+            )
         _sojourn_grid(p, s, sojourn, idx, level, attributes, x, lane, cell, end, levels, c, h, integrated_d, full_d, part_d,
                       others, w)  # fmt: skip
 

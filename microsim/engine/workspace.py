@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from microsim.engine import queue, tally
+from microsim.engine import columns, tally
 from microsim.program import FIXED_FIELDS, Program
 from microsim.records.simulation import Layout
 
@@ -21,10 +21,10 @@ class Workspace:
         self.memory = np.zeros((FIXED_FIELDS + self.fields, chunk))
         self.remaining = np.zeros((clocks, chunk))
         self.accumulators = np.zeros((max(p.accumulators for p in programs), chunk))
-        self.rows = np.zeros((max(p.rows for p in programs), queue.BLOCK))
-        self.x = np.zeros((queue.N_SCRATCH, queue.BLOCK))
-        self.ints = np.zeros((5, queue.BLOCK), dtype=np.int64)
-        self.words = np.zeros((2, queue.BLOCK), dtype=np.uint64)
+        self.rows = np.zeros((max(p.rows for p in programs), columns.BLOCK))
+        self.x = np.zeros((columns.N_SCRATCH, columns.BLOCK))
+        self.ints = np.zeros((5, columns.BLOCK), dtype=np.int64)
+        self.words = np.zeros((2, columns.BLOCK), dtype=np.uint64)
         self.waiting = np.zeros((states, chunk), dtype=np.int64)
         self.counts = np.zeros(states, dtype=np.int64)
         self.present = np.zeros((states if log_rows == 0 else 0, edges + 1))
@@ -32,8 +32,11 @@ class Workspace:
         most_arcs = max(int(np.max(np.diff(p.arrays.states[:, 1:3], axis=1))) for p in programs)
         self._tally = (
             self.rows,
-            np.zeros((5 + most_arcs, queue.BLOCK)),
-            *(np.zeros(tally.SEGMENTS, dtype=kind) for kind in (np.int64, np.int64, np.float64, np.int64, np.float64, np.float64)),
+            np.zeros((5 + most_arcs, columns.BLOCK)),
+            *(
+                np.zeros(tally.SEGMENTS, dtype=kind)
+                for kind in (np.int64, np.int64, np.float64, np.int64, np.float64, np.float64)
+            ),
         )
         self.resize_log(log_rows)
 

@@ -73,12 +73,18 @@ def _optimise(family: str, data: Data) -> tuple[F, F, float]:
     for start in _starts(family, data):
         x0 = np.concatenate([start, np.zeros(data.covariates.shape[1])])
         found = optimize.minimize(
-            lambda w: negative_loglik(family, w, data), x0, jac=True, method="L-BFGS-B", options={"maxiter": 500, "ftol": 1e-14}
+            lambda w: negative_loglik(family, w, data),
+            x0,
+            jac=True,
+            method="L-BFGS-B",
+            options={"maxiter": 500, "ftol": 1e-14},
         )
         if np.isfinite(found.fun) and (best is None or found.fun < best[0]):
             best = float(found.fun), found.x
     if best is None:
-        raise FitError(f"{family}: no starting point gives a finite likelihood; check the durations for extreme values.")
+        raise FitError(
+            f"{family}: no starting point gives a finite likelihood; check the durations for extreme values."
+        )
     return _polish(family, best[1], data)
 
 

@@ -74,7 +74,9 @@ class Fit:
     def draw(self, n: int, seed: int) -> dict[str, F]:
         """Multivariate normal draws on the working scale, as natural parameters and coefficients, each float64[n]."""
         rng = np.random.default_rng(seed)
-        values = rng.multivariate_normal(np.asarray(self.working), np.asarray(self.covariance), size=n, method="cholesky")
+        values = rng.multivariate_normal(
+            np.asarray(self.working), np.asarray(self.covariance), size=n, method="cholesky"
+        )
         out = natural(self.family, values)
         first = len(WORKING[self.family])
         return out | {name: values[:, first + i] for i, name in enumerate(self.coefficients)}

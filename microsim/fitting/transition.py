@@ -57,7 +57,9 @@ class FittedTransition:
 
 def _grid(longest: float) -> F:
     """From very short to longest: geometric for the start, even for the rest."""
-    return np.unique(np.concatenate([[0.0], np.geomspace(longest * 1e-4, longest, POINTS), np.linspace(0, longest, POINTS)]))
+    return np.unique(
+        np.concatenate([[0.0], np.geomspace(longest * 1e-4, longest, POINTS), np.linspace(0, longest, POINTS)])
+    )
 
 
 def _round_times(longest: float) -> F:

@@ -33,7 +33,9 @@ class _ParquetFile:
     def __enter__(self) -> _ParquetFile:
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
         self.writer.close()
 
     def write(self, columns: list[pa.Array]) -> None:

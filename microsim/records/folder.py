@@ -20,7 +20,15 @@ def refuse_existing(target: Path) -> None:
     """Raise InputError if the folder is already there with something in it, or cannot be made."""
     if target.is_file() or (target.is_dir() and any(target.iterdir())):
         raise InputError(
-            [Fault("command line", "--out", "there are results already", "Name a new folder; nothing is overwritten.", str(target))]
+            [
+                Fault(
+                    "command line",
+                    "--out",
+                    "there are results already",
+                    "Name a new folder; nothing is overwritten.",
+                    str(target),
+                )
+            ]
         )
 
 

@@ -32,7 +32,14 @@ HERE = Path(__file__).parent
 THRESHOLD = 20_000.0
 FLAGS = {
     "floor": ["-O3", "-march=native", "-ffp-contract=off"],
-    "floor_simd": ["-O3", "-march=native", "-mprefer-vector-width=512", "-fno-math-errno", "-fno-trapping-math", "-fno-signed-zeros"],
+    "floor_simd": [
+        "-O3",
+        "-march=native",
+        "-mprefer-vector-width=512",
+        "-fno-math-errno",
+        "-fno-trapping-math",
+        "-fno-signed-zeros",
+    ],
 }
 
 
@@ -71,7 +78,11 @@ def run_engine(study: BoundStudy, *, patients: int, seed: int) -> dict[str, floa
         "inb": increment(list(m.mean[:, at["qaly_disc"]]), list(m.mean[:, at["cost_disc"]])),
         "inb_variance": float(weights @ m.money @ weights),
         **{f"{name}_{arm}": float(m.mean[i, j]) for name, j in at.items() for i, arm in enumerate("AB")},
-        **{f"{name}_se_{arm}": math.sqrt(m.covariance[j, i, i] / patients) for name, j in at.items() for i, arm in enumerate("AB")},
+        **{
+            f"{name}_se_{arm}": math.sqrt(m.covariance[j, i, i] / patients)
+            for name, j in at.items()
+            for i, arm in enumerate("AB")
+        },
     }
 
 
