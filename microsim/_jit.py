@@ -40,7 +40,7 @@ from llvmlite import ir  # noqa: E402
 from numba.core import types  # noqa: E402
 from numba.extending import intrinsic  # noqa: E402
 
-numba.config.CACHE_DIR = os.environ["NUMBA_CACHE_DIR"]
+setattr(numba.config, "CACHE_DIR", os.environ["NUMBA_CACHE_DIR"])  # noqa: B010  (in case Numba was imported before us)
 
 Kernel = TypeVar("Kernel", bound=Callable[..., Any])
 

@@ -85,9 +85,8 @@ def _refined(edges: F, timing: Timing) -> tuple[F, npt.NDArray[np.int64]]:
 
 def _per_parent(values: F, parent: npt.NDArray[np.int64], cells: int) -> F:
     """Sum refined cells, axis -2, into their parents."""
-    out = np.zeros((*values.shape[:-2], cells, values.shape[-1]))
-    np.add.at(out, (..., parent, slice(None)), values)
-    return out
+    first = np.searchsorted(parent, np.arange(cells))
+    return np.asarray(np.add.reduceat(values, first, axis=-2))
 
 
 def run_exact(generator: F, *, edges: F, start: F, timing: Timing) -> Occupancy:

@@ -46,7 +46,7 @@ def _nearest_supported(supported: npt.NDArray[np.bool_]) -> npt.NDArray[np.int64
     if known.size == 0:
         return cells
     distance = np.abs(cells[:, None] - known[None, :])
-    return known[np.argmin(distance, axis=1)]
+    return np.asarray(known[np.argmin(distance, axis=1)], dtype=np.int64)
 
 
 def project(record: SimulationRecord, *, path: int, arm: int, background: tuple[bool, ...]) -> Projection:
@@ -61,7 +61,7 @@ def project(record: SimulationRecord, *, path: int, arm: int, background: tuple[
     integrated = leave_one_out(tally.integrated)
     supported = paths.exposure.sum(axis=0) > 0
     # an arc's cell counts as supported only if every leave-one-out replicate has exposure there
-    stable = (exposure > 0).all(axis=0)
+    stable = np.asarray((exposure > 0).all(axis=0))
     by_state = exposure.sum(axis=-1)
     rates = np.zeros_like(integrated)
     for a, (k, source, _) in enumerate(arcs):

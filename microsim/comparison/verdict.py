@@ -130,7 +130,7 @@ def paired_se(moments: Moments, threshold: float) -> F:
         for j in range(n):
             if i != j:
                 w = money_weights(n, i, j, threshold)
-                out[i, j] = math.sqrt(max(w @ moments.money @ w, 0.0) / moments.patients)
+                out[i, j] = math.sqrt(max(float(w @ moments.money @ w), 0.0) / moments.patients)
     return out
 
 

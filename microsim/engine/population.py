@@ -21,7 +21,7 @@ def _quantile(law: Law, u: F) -> F:
     if law.kind == "normal":
         return np.asarray(p["mean"] + p["sd"] * special.ndtri(u))
     if law.kind == "lognormal":
-        return np.exp(p["meanlog"] + p["sdlog"] * special.ndtri(u))
+        return np.asarray(np.exp(p["meanlog"] + p["sdlog"] * special.ndtri(u)))
     if law.kind == "gamma":
         return np.asarray(special.gammaincinv(p["shape"], u) / p["rate"])
     if law.kind == "beta":

@@ -209,8 +209,8 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
     discount_integral(p.numbers[1], annual, years, x[T1], x[COST1], w)
     if not one_rate:
         discount_integral(p.numbers[2], annual, years, x[T1], x[EFFECT1], w)
-    add_rewards(p.flow, p.states[state, FLOW], p.states[state, FLOW_END], state, p.sizes[0], p.sizes[1], one_rate, idx, accumulators,
-            rows, x, w)  # fmt: skip
+    first, last = p.states[state, FLOW], p.states[state, FLOW_END]
+    add_rewards(p.flow, first, last, state, p.sizes[0], p.sizes[1], one_rate, idx, accumulators, rows, x, w)
     if present.shape[0] > 0:
         _count_presence(state, cause, present, inverse_cell, horizon, x, w)
     if log_value.shape[1] > 0 and not _write_log(state, idx, cause, memory, log_index, log_value, status, x, w):

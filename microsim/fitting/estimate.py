@@ -27,7 +27,7 @@ def _starts(family: str, data: Data) -> list[F]:
     if family == "gompertz":
         return [np.array([g, log_rate]) for g in (0.0, 0.5, -0.5)]
     logs = np.log(data.times[data.events > 0])
-    middle, spread = float(np.mean(logs)), float(max(np.std(logs), 0.1))
+    middle, spread = float(np.mean(logs)), max(float(np.std(logs)), 0.1)
     if family == "lognormal":
         return [np.array([middle, np.log(spread)]), np.array([-log_rate, 0.0]), np.array([-log_rate + 1.0, 0.7])]
     return [np.array([a, b]) for a in (0.0, -0.5, 0.7) for b in (-log_rate, middle)]
@@ -165,10 +165,10 @@ def fit_family(
     converged = decrement < DECREMENT
     if strict and not converged:
         raise FitError(
-            f"{family}: no interior maximum of the likelihood was found ({int(raw.events.sum())} events). Use a simpler family, "
-            "or fewer covariates."
+            f"{family}: no interior maximum of the likelihood was found ({int(raw.events.sum())} events). "
+            "Use a simpler family, or fewer covariates."
         )
-    v = np.linalg.inv(information) if np.isfinite(decrement) else np.full_like(information, np.nan)
+    v = np.asarray(np.linalg.inv(information) if np.isfinite(decrement) else np.full_like(information, np.nan))
     loglik = -negative_loglik(family, w, data)[0] - float(np.sum(raw.weights * raw.events)) * np.log(scale)
     w, v = _unscaled(family, w, v, scale)
     params = {name: float(value) for name, value in natural(family, w).items()}

@@ -53,8 +53,9 @@ def kaplan_meier(times: npt.ArrayLike, events: npt.ArrayLike, *, entry: npt.Arra
         width = Z95 * np.sqrt(greenwood) / np.abs(log_s)
         lower, upper = survival ** np.exp(width), survival ** np.exp(-width)
     inside = (survival > 0) & (survival < 1)
-    error = np.where(survival > 0, survival * np.sqrt(np.where(np.isfinite(greenwood), greenwood, 0.0)), 0.0)
-    return StepCurve(when, survival, error, np.where(inside, lower, survival), np.where(inside, upper, survival))
+    error = np.asarray(survival * np.sqrt(np.where(np.isfinite(greenwood), greenwood, 0.0)), dtype=np.float64)
+    limits = (np.asarray(np.where(inside, limit, survival), dtype=np.float64) for limit in (lower, upper))
+    return StepCurve(when, np.asarray(survival), error, *limits)
 
 
 def nelson_aalen(times: npt.ArrayLike, events: npt.ArrayLike, *, entry: npt.ArrayLike | None = None) -> StepCurve:

@@ -42,11 +42,11 @@ def _rate_lognormal(p: dict[str, float], t: F) -> F:
 
 def _rate_loglogistic(p: dict[str, float], t: F) -> F:
     u = p["shape"] * (_log(t) - np.log(p["scale"]))
-    return np.exp(np.log(p["shape"]) - _log(t) + u - np.logaddexp(0.0, u))
+    return np.asarray(np.exp(np.log(p["shape"]) - _log(t) + u - np.logaddexp(0.0, u)))
 
 
 def _inv_loglogistic(p: dict[str, float], h: F) -> F:
-    return p["scale"] * np.exp((h + _log(-np.expm1(-h))) / p["shape"])
+    return np.asarray(p["scale"] * np.exp((h + _log(-np.expm1(-h))) / p["shape"]))
 
 
 _CUMULATIVE: dict[str, Callable[[dict[str, float], F], F]] = {
@@ -115,7 +115,7 @@ def inverse(hazard: Hazard, h: npt.ArrayLike, *, level: Levels = None) -> F:
     j = np.maximum((cum < need[:, None]).sum(axis=1) - 1, 0)
     beyond = need - cum[i, j]
     with np.errstate(divide="ignore", invalid="ignore"):
-        return np.where(beyond > 0, edges[j] + beyond / rates[i, j], edges[j])
+        return np.asarray(np.where(beyond > 0, edges[j] + beyond / rates[i, j], edges[j]))
 
 
 def survival(hazard: Hazard, t: npt.ArrayLike, *, level: Levels = None) -> F:

@@ -63,7 +63,7 @@ _NUMPY: dict[str, Callable[..., Array]] = {
     "exp": np.exp, "log": np.log, "sqrt": np.sqrt, "abs": np.abs, "min": np.minimum, "max": np.maximum,
     "lt": np.less, "le": np.less_equal, "gt": np.greater, "ge": np.greater_equal, "eq": np.equal, "ne": np.not_equal,
     "and": lambda a, b: (a != 0) & (b != 0), "or": lambda a, b: (a != 0) | (b != 0), "not": lambda a: a == 0,
-    "where": lambda c, a, b: np.where(c != 0, a, b),
+    "where": lambda c, a, b: np.asarray(np.where(c != 0, a, b)),
 }  # fmt: skip
 
 

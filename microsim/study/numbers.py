@@ -63,12 +63,10 @@ class Numbers:
         """The hazard in study time units, its parameters checked."""
         if spec.kind == "table":
             return Hazard("table", by=spec.by, edges=spec.edges, rates=spec.rates)
-        if spec.kind == "fit":
-            hazard = fits.get(spec.fit, UNKNOWN_HAZARD)
-        else:
-            hazard = Hazard(spec.kind, self._parameters(spec, key))
+        fitted = spec.kind == "fit"
+        hazard = fits.get(spec.fit, UNKNOWN_HAZARD) if fitted else Hazard(spec.kind, self._parameters(spec, key))
         problems = parameter_problems(hazard)
-        if not self.partial and spec.kind == "fit":
+        if not self.partial and fitted:
             problems += [(n, "the fit gave no number") for n, v in hazard.params.items() if math.isnan(v)]
         for name, problem in problems:
             self.fault(
