@@ -66,7 +66,7 @@ class _Clock:
         self.seconds[name] = round(time.perf_counter() - begin, 3)
 
 
-def _checked(study: Study, patients: int | None, seed: int | None, threads: int | None) -> tuple[int, int, int]:
+def check_settings(study: Study, patients: int | None, seed: int | None, threads: int | None) -> tuple[int, int, int]:
     """Numbers of the run, from the call or the study; InputError if out of range."""
     n = study.patients if patients is None else patients
     s = study.seed if seed is None else seed
@@ -172,7 +172,7 @@ def run(
     """
     if not isinstance(study, Study):
         study = load_study(study)
-    n, s, k = _checked(study, patients, seed, threads)
+    n, s, k = check_settings(study, patients, seed, threads)
     clock = _Clock()
     tell = stage or (lambda name, done, total: None)
     with clock.stage("fit"):

@@ -99,6 +99,7 @@ def run(arguments: argparse.Namespace) -> int:
 
     from microsim.cache import cache_root
     from microsim.cli.progress import Progress
+    from microsim.pipeline import check_settings
     from microsim.pipeline import run as run_study
     from microsim.records.folder import new_folder, refuse_existing
     from microsim.report.terminal import print_verdict
@@ -107,6 +108,7 @@ def run(arguments: argparse.Namespace) -> int:
     study = load_study(arguments.study)
     target = _target(arguments, study)
     refuse_existing(target)
+    check_settings(study, arguments.patients, arguments.seed, arguments.threads)
     notes = Console(stderr=True)
     _announce(notes)
     with new_folder(target) as folder:

@@ -36,6 +36,7 @@ def refuse_existing(target: Path) -> None:
 def new_folder(target: Path) -> Iterator[Path]:
     """A scratch folder that becomes ``target`` when the block ends well, and vanishes when it does not."""
     refuse_existing(target)
+    made_parent = not target.parent.exists()
     target.parent.mkdir(parents=True, exist_ok=True)
     scratch = Path(tempfile.mkdtemp(prefix=f".{target.name}-", dir=target.parent))
     try:
@@ -46,6 +47,8 @@ def new_folder(target: Path) -> Iterator[Path]:
         os.replace(scratch, target)
     finally:
         shutil.rmtree(scratch, ignore_errors=True)
+        if made_parent and not any(target.parent.iterdir()):
+            target.parent.rmdir()
 
 
 def write_tables(folder: Path, tables: Mapping[str, pd.DataFrame]) -> None:
