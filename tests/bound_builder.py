@@ -7,7 +7,15 @@ from collections.abc import Mapping, Sequence
 
 from microsim.hazards.core import Hazard
 from microsim.study.bound import (
-    BoundArm, BoundAttribute, BoundClock, BoundPopulation, BoundState, BoundStudy, CohortSettings, Decision, Discounting,
+    BoundArm,
+    BoundAttribute,
+    BoundClock,
+    BoundPopulation,
+    BoundState,
+    BoundStudy,
+    CohortSettings,
+    Decision,
+    Discounting,
 )  # fmt: skip
 from microsim.study.expression import Node, const
 
@@ -78,7 +86,8 @@ def study(
     """One arm is doubled, since a study compares at least two. Arms are named A, B, C, ..."""
     given = list(arms) if len(arms) > 1 else [arms[0], arms[0]]
     built = tuple(
-        BoundArm("ABCDEFG"[i], "", tuple(s), tuple(k), once[i] if i < len(once) else {}) for i, (s, k) in enumerate(given)
+        BoundArm("ABCDEFG"[i], "", tuple(s), tuple(k), once[i] if i < len(once) else {})
+        for i, (s, k) in enumerate(given)
     )
     names: dict[str, None] = {}
     for arm in built:

@@ -45,12 +45,18 @@ def _imports(file: Path) -> set[str]:
             found |= {node.module, *(f"{node.module}.{a.name}" for a in node.names)}
     ours = {m.removeprefix("microsim.") for m in found if m.startswith("microsim.")}
     # "from microsim.engine import queue" names both the room and the module: keep what exists
-    return {m for m in ours if (PACKAGE / (m.replace(".", "/") + ".py")).exists() or (PACKAGE / m.replace(".", "/")).is_dir()}
+    return {
+        m
+        for m in ours
+        if (PACKAGE / (m.replace(".", "/") + ".py")).exists() or (PACKAGE / m.replace(".", "/")).is_dir()
+    }
 
 
 def _permitted(module: str, room: str) -> bool:
     allowed = ALLOWED[room] | {room, "errors"}
-    return any(module == a or module.startswith(a + ".") for a in allowed) or any(a.startswith(module + ".") for a in allowed)
+    return any(module == a or module.startswith(a + ".") for a in allowed) or any(
+        a.startswith(module + ".") for a in allowed
+    )
 
 
 def _sources() -> list[Path]:
@@ -71,7 +77,11 @@ def test_the_rule_would_catch_a_report_that_imports_an_engine() -> None:
 
 
 def test_only_one_module_touches_numba() -> None:
-    touching = [f.name for f in _sources() if "import numba" in f.read_text(encoding="utf-8") or "from numba" in f.read_text(encoding="utf-8")]
+    touching = [
+        f.name
+        for f in _sources()
+        if "import numba" in f.read_text(encoding="utf-8") or "from numba" in f.read_text(encoding="utf-8")
+    ]
     assert touching == ["_jit.py"]
 
 
@@ -87,7 +97,9 @@ def test_help_loads_nothing_heavy(arguments: list[str]) -> None:
 
 
 def test_no_file_has_grown_beyond_what_a_reader_can_hold() -> None:
-    long = {str(f.relative_to(ROOT)): n for f in _sources() if (n := len(f.read_text(encoding="utf-8").splitlines())) > 500}
+    long = {
+        str(f.relative_to(ROOT)): n for f in _sources() if (n := len(f.read_text(encoding="utf-8").splitlines())) > 500
+    }
     assert not long
 
 

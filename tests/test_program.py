@@ -37,13 +37,35 @@ def _formula_study(formulas: list[Node]) -> BoundStudy:
         BoundAttribute("a", Law("normal", {"mean": 0.0, "sd": 2.0})),
         BoundAttribute("b", Law("uniform", {"low": 0.1, "high": 3.0})),
     )
-    return study((states, (clock("never", "Here", "Gone", hazard("exponential", rate=1e-12)),)), horizon=1.0, attributes=attributes)
+    return study(
+        (states, (clock("never", "Here", "Gone", hazard("exponential", rate=1e-12)),)),
+        horizon=1.0,
+        attributes=attributes,
+    )
 
 
 _LEAVES = st.one_of(
     st.floats(-3, 3).map(lambda v: const(round(v, 3))), st.sampled_from([attribute("a"), attribute("b"), const(2.0)])
 )
-_SMOOTH = ["add", "sub", "mul", "min", "max", "neg", "abs", "lt", "le", "gt", "ge", "eq", "ne", "and", "or", "not", "where"]
+_SMOOTH = [
+    "add",
+    "sub",
+    "mul",
+    "min",
+    "max",
+    "neg",
+    "abs",
+    "lt",
+    "le",
+    "gt",
+    "ge",
+    "eq",
+    "ne",
+    "and",
+    "or",
+    "not",
+    "where",
+]
 
 
 def _trees(children: st.SearchStrategy[Node]) -> st.SearchStrategy[Node]:
@@ -71,7 +93,15 @@ def test_the_tape_computes_what_the_tree_means(formulas: list[Node]) -> None:
 
 def test_functions_and_powers_of_the_tape_agree_with_numpy() -> None:
     a, b = attribute("a"), attribute("b")
-    formulas = [op("exp", a), op("log", b), op("sqrt", b), op("div", a, b), op("pow", b, a), op("pow", a, 2.0), op("pow", a, 3.0)]
+    formulas = [
+        op("exp", a),
+        op("log", b),
+        op("sqrt", b),
+        op("div", a, b),
+        op("pow", b, a),
+        op("pow", a, 2.0),
+        op("pow", a, 3.0),
+    ]
     test_the_tape_computes_what_the_tree_means.hypothesis.inner_test(formulas)
 
 

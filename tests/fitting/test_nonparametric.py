@@ -1,0 +1,74 @@
+"""Kaplan-Meier, Nelson-Aalen and the mean cumulative function against published and hand-worked values."""
+
+from __future__ import annotations
+
+from itertools import pairwise
+
+import numpy as np
+import pytest
+
+from microsim.fitting.nonparametric import at_risk, kaplan_meier, mean_cumulative_function, nelson_aalen
+
+# Remission times in weeks of 6-MP patients (Gehan 1965 data); Kaplan-Meier values with standard errors as printed in the
+# documentation of NAG routine g12aac (read there).
+TIMES = [6, 6, 6, 7, 10, 13, 16, 22, 23, 6, 9, 10, 11, 17, 19, 20, 25, 32, 32, 34, 35]
+EVENTS = [1, 1, 1, 1, 1, 1, 1, 1, 1] + [0] * 12
+PRINTED = {6: (0.8571, 0.0764), 7: (0.8067, 0.0869), 10: (0.7529, 0.0963), 13: (0.6902, 0.1068),
+           16: (0.6275, 0.1141), 22: (0.5378, 0.1282), 23: (0.4482, 0.1346)}  # fmt: skip
+
+
+def test_the_published_remission_example_is_reproduced() -> None:
+    curve = kaplan_meier(TIMES, EVENTS)
+    assert list(curve.time) == list(PRINTED)
+    for value, error, (printed, printed_error) in zip(curve.value, curve.standard_error, PRINTED.values(), strict=True):
+        assert value == pytest.approx(printed, abs=5e-5)
+        assert error == pytest.approx(printed_error, abs=5e-5)
+
+
+# Kaplan and Meier (1958), section 3 example: losses at 1, 2, 7 and 12, deaths at 0.8, 3.1, 5.4 and 9.2 (from memory,
+# recomputed by hand: 7/8, 7/8 x 4/5, 7/8 x 4/5 x 3/4, 7/8 x 4/5 x 3/4 x 1/2).
+def test_kaplan_and_meiers_own_example() -> None:
+    curve = kaplan_meier([0.8, 1.0, 2.7, 3.1, 5.4, 7.0, 9.2, 12.1], [1, 0, 0, 1, 1, 0, 1, 0])
+    np.testing.assert_allclose(
+        curve.value, [7 / 8, 7 / 8 * 4 / 5, 7 / 8 * 4 / 5 * 3 / 4, 7 / 8 * 4 / 5 * 3 / 4 * 1 / 2]
+    )
+
+
+def test_late_entry_leaves_people_out_of_earlier_risk_sets() -> None:
+    curve = kaplan_meier([2.0, 3.0, 4.0], [1, 1, 1], entry=[0.0, 2.5, 0.0])
+    np.testing.assert_allclose(curve.value, [1 / 2, 1 / 4, 0.0])
+    assert list(at_risk(np.array([2.0, 3.0, 4.0]), np.array([-np.inf, 2.5, -np.inf]), np.array([0.0, 2.0, 3.0]))) == [
+        2,
+        2,
+        2,
+    ]
+
+
+def test_nelson_aalen_adds_deaths_over_numbers_at_risk() -> None:
+    curve = nelson_aalen(TIMES, EVENTS)
+    assert curve.value[-1] == pytest.approx(3 / 21 + 1 / 17 + 1 / 15 + 1 / 12 + 1 / 11 + 1 / 7 + 1 / 6)
+    assert curve.standard_error[0] == pytest.approx(np.sqrt(3) / 21)
+    assert curve.at([5.9, 6.0], before=0.0) == pytest.approx([0.0, 3 / 21])
+
+
+def test_the_mean_cumulative_function_of_a_hand_worked_example() -> None:
+    # patient 1: events at 1 and 3, out at 4; patient 2: event at 2, out at 2.5
+    curve = mean_cumulative_function([1, 1, 1, 2, 2], [0, 1, 3, 0, 2], [1, 3, 4, 2, 2.5], [1, 1, 0, 1, 0], samples=50)
+    np.testing.assert_allclose(curve.time, [1, 2, 3])
+    np.testing.assert_allclose(curve.value, [0.5, 1.0, 2.0])
+    assert np.all(curve.lower <= curve.value) and np.all(curve.value <= curve.upper)
+
+
+def test_the_bootstrap_of_patients_matches_poisson_theory() -> None:
+    rng = np.random.default_rng(1)
+    counts = rng.poisson(3.0, 400)
+    rows = [(i, s, e, k) for i, n in enumerate(counts) for s, e, k in _rows(np.sort(rng.random(n)))]
+    patient, start, stop, event = map(np.array, zip(*rows, strict=True))
+    curve = mean_cumulative_function(patient, start, stop, event, samples=400, seed=2)
+    # SE of a mean of Poisson(3) counts, within 4.5 bootstrap errors of 1 / sqrt(2 x 400)
+    assert curve.standard_error[-1] == pytest.approx(np.sqrt(3 / 400), rel=4.5 / np.sqrt(800))
+
+
+def _rows(times: np.ndarray) -> list[tuple[float, float, int]]:
+    edges = np.concatenate([[0.0], times, [1.0]])
+    return [(a, b, int(i < times.size)) for i, (a, b) in enumerate(pairwise(edges))]
