@@ -70,7 +70,7 @@ def project(record: SimulationRecord, *, path: int, arm: int, background: tuple[
             rates[:, a] = _safe_ratio(integrated[:, a], exposure[:, source])[:, cells]
         else:
             rates[:, a] = _safe_ratio(integrated[:, a].sum(axis=-1), by_state[:, source])[:, None]
-    _refuse_unknown(record, path, arm, rates, supported.any(axis=-1))
+    _refuse_unknown(record, path, arm, tally.integrated.sum(axis=(0, 2)), supported.any(axis=-1))
     return Projection(
         rates=rates,
         rewards=_safe_ratio(leave_one_out(tally.reward).sum(axis=-1), by_state[:, None, :]),
@@ -81,11 +81,13 @@ def project(record: SimulationRecord, *, path: int, arm: int, background: tuple[
     )
 
 
-def _refuse_unknown(record: SimulationRecord, path: int, arm: int, rates: F, visited: npt.NDArray[np.bool_]) -> None:
+def _refuse_unknown(record: SimulationRecord, path: int, arm: int, expected: F, visited: npt.NDArray[np.bool_]) -> None:
+    """expected: arrivals along each arc among all simulated patients, had they lived under the evaluated arm's hazards. Below
+    one, the share of the cohort that would be stuck is less than one patient in the run."""
     layout = record.layout
     leaves = {source for _, source, _ in layout.arcs}
     for a, (k, source, target) in enumerate(layout.arcs):
-        if visited[source] and not visited[target] and target in leaves and rates[0, a].any():
+        if visited[source] and not visited[target] and target in leaves and expected[a] > 1.0:
             raise CohortError(
                 f"the cohort of {layout.strategies[arm]} would enter state {layout.states[target]} by clock "
                 f"{layout.clocks[k]}, but the simulated patients of {layout.strategies[path]} spend no time there, so the "

@@ -34,11 +34,12 @@ def _undominated(points: list[tuple[str, float, float]]) -> tuple[list[tuple[str
 
 
 def _convex(points: list[tuple[str, float, float]]) -> tuple[list[tuple[str, float, float]], dict[str, str]]:
-    """Lower convex hull: ICERs rise along it. Who lies above the line between two neighbours is extendedly dominated."""
+    """Lower convex hull: ICERs never fall along it. Who lies above the line between two neighbours is extendedly dominated;
+    who lies on it stays."""
     hull: list[tuple[str, float, float]] = []
     dropped: dict[str, str] = {}
     for point in points:
-        while len(hull) >= 2 and _slope(hull[-2], hull[-1]) >= _slope(hull[-1], point):
+        while len(hull) >= 2 and _slope(hull[-2], hull[-1]) > _slope(hull[-1], point):
             middle = hull.pop()
             dropped[middle[0]] = f"{hull[-1][0]} and {point[0]}"
         hull.append(point)

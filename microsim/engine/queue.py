@@ -1,6 +1,6 @@
 """The compiled event queue: one chunk of patients of one arm, from model start to horizon or absorption.
 
-Patients wait in a list per state; the state with most waiting is advanced in blocks of up to 256. In a block every
+Patients wait in a list per state; the state with most waiting is advanced in blocks of up to 1,024. In a block every
 primitive (gather, formula, inversion, discounting, minimum) is a plain loop the compiler vectorises. What a patient
 carries (thresholds, memory, accumulators) lies in arrays [field, patient] and moves only by index. Kernels write status
 codes; the runner raises.

@@ -24,25 +24,37 @@ def _log(t: F) -> F:
 
 
 def _cum_gompertz(p: dict[str, float], t: F) -> F:
-    return p["rate"] * t if p["shape"] == 0 else p["rate"] / p["shape"] * np.expm1(p["shape"] * t)
+    with np.errstate(over="ignore"):
+        return p["rate"] * t if p["shape"] == 0 else p["rate"] / p["shape"] * np.expm1(p["shape"] * t)
+
+
+def _rate_gompertz(p: dict[str, float], t: F) -> F:
+    with np.errstate(over="ignore"):
+        return np.asarray(p["rate"] * np.exp(p["shape"] * t))
 
 
 def _inv_gompertz(p: dict[str, float], h: F) -> F:
     if p["shape"] == 0:
         return h / p["rate"]
-    x = p["shape"] / p["rate"] * h
+    x = p["shape"] * (h / p["rate"])
     return np.where(x > -1.0, np.log1p(np.maximum(x, -1.0 + 1e-300)) / p["shape"], np.inf)
 
 
+def _rate_weibull(p: dict[str, float], t: F) -> F:
+    with np.errstate(divide="ignore"):
+        return np.asarray(p["shape"] / p["scale"] * (t / p["scale"]) ** (p["shape"] - 1.0))
+
+
 def _rate_lognormal(p: dict[str, float], t: F) -> F:
-    z = (_log(t) - p["meanlog"]) / p["sdlog"]
-    log_f = -0.5 * z * z - 0.5 * np.log(2 * np.pi) - np.log(p["sdlog"]) - _log(t)
+    log_t = np.log(np.where(t > 0, t, 1.0))
+    z = (log_t - p["meanlog"]) / p["sdlog"]
+    log_f = -0.5 * z * z - 0.5 * np.log(2 * np.pi) - np.log(p["sdlog"]) - log_t
     return np.where(t > 0, np.exp(log_f - special.log_ndtr(-z)), 0.0)
 
 
 def _rate_loglogistic(p: dict[str, float], t: F) -> F:
-    u = p["shape"] * (_log(t) - np.log(p["scale"]))
-    return np.asarray(np.exp(np.log(p["shape"]) - _log(t) + u - np.logaddexp(0.0, u)))
+    # (k / scale) (t / scale)^(k - 1) / (1 + (t / scale)^k): the power gives the limit at zero, expit the far tail
+    return _rate_weibull(p, t) * special.expit(-p["shape"] * (_log(t) - np.log(p["scale"])))
 
 
 def _inv_loglogistic(p: dict[str, float], h: F) -> F:
@@ -58,8 +70,8 @@ _CUMULATIVE: dict[str, Callable[[dict[str, float], F], F]] = {
 }
 _RATE: dict[str, Callable[[dict[str, float], F], F]] = {
     "exponential": lambda p, t: np.full_like(t, p["rate"]),
-    "weibull": lambda p, t: p["shape"] / p["scale"] * (t / p["scale"]) ** (p["shape"] - 1.0),
-    "gompertz": lambda p, t: p["rate"] * np.exp(p["shape"] * t),
+    "weibull": _rate_weibull,
+    "gompertz": _rate_gompertz,
     "lognormal": _rate_lognormal,
     "loglogistic": _rate_loglogistic,
 }
@@ -72,12 +84,12 @@ _INVERSE: dict[str, Callable[[dict[str, float], F], F]] = {
 }
 
 
-def _table(hazard: Hazard, level: Levels, size: int) -> tuple[F, F, F]:
-    """Edges float64[n+1], rates and cumulative hazards at left edges float64[size, n]."""
+def _table(hazard: Hazard, level: Levels, size: int) -> tuple[F, F, F, npt.NDArray[np.int64]]:
+    """Edges float64[n+1], rates and cumulative hazards at left edges float64[levels, n], row int64[size]."""
     edges, rates = np.asarray(hazard.edges), np.asarray(hazard.rates)
     cum = np.concatenate([np.zeros((rates.shape[0], 1)), np.cumsum(rates * np.diff(edges), axis=1)[:, :-1]], axis=1)
     rows = np.zeros(size, dtype=np.int64) if level is None else np.asarray(level)
-    return edges, rates[rows], cum[rows]
+    return edges, rates, cum, rows
 
 
 def _table_cells(edges: F, t: F) -> npt.NDArray[np.int64]:
@@ -85,37 +97,39 @@ def _table_cells(edges: F, t: F) -> npt.NDArray[np.int64]:
 
 
 def cumulative(hazard: Hazard, t: npt.ArrayLike, *, level: Levels = None) -> F:
-    """H(t), float64[n], t >= 0. Tables: no hazard before the first edge, the last rate holds beyond the last;
-    ``level`` int64[n] selects the row of a table."""
+    """H(t), float64[n], t >= 0 and finite. Tables: no hazard before the first edge, the last rate holds beyond the
+    last; ``level`` int64[n] selects the row of a table."""
     time = np.atleast_1d(np.asarray(t, dtype=np.float64))
     if hazard.family != "table":
         return np.asarray(_CUMULATIVE[hazard.family](dict(hazard.params), time))
-    edges, rates, cum = _table(hazard, level, time.size)
-    j, i = _table_cells(edges, time), np.arange(time.size)
-    return np.asarray(cum[i, j] + np.maximum(time - edges[j], 0.0) * rates[i, j])
+    edges, rates, cum, rows = _table(hazard, level, time.size)
+    j = _table_cells(edges, time)
+    return np.asarray(cum[rows, j] + np.maximum(time - edges[j], 0.0) * rates[rows, j])
 
 
 def rate(hazard: Hazard, t: npt.ArrayLike, *, level: Levels = None) -> F:
-    """h(t), float64[n]."""
+    """h(t), float64[n]; inf at zero where the family starts there."""
     time = np.atleast_1d(np.asarray(t, dtype=np.float64))
     if hazard.family != "table":
         return np.asarray(_RATE[hazard.family](dict(hazard.params), time))
-    edges, rates, _ = _table(hazard, level, time.size)
-    return np.where(time < edges[0], 0.0, rates[np.arange(time.size), _table_cells(edges, time)])
+    edges, rates, _, rows = _table(hazard, level, time.size)
+    return np.where(time < edges[0], 0.0, rates[rows, _table_cells(edges, time)])
 
 
 def inverse(hazard: Hazard, h: npt.ArrayLike, *, level: Levels = None) -> F:
-    """Smallest t with H(t) >= h, float64[n]; inf where the hazard never adds up to h."""
+    """Smallest t >= 0 with H(t) >= h, float64[n]; inf where the hazard never adds up to h."""
     need = np.atleast_1d(np.asarray(h, dtype=np.float64))
-    if hazard.family != "table":
-        with np.errstate(divide="ignore", over="ignore"):
-            return np.asarray(_INVERSE[hazard.family](dict(hazard.params), need))
-    edges, rates, cum = _table(hazard, level, need.size)
-    i = np.arange(need.size)
-    j = np.maximum((cum < need[:, None]).sum(axis=1) - 1, 0)
-    beyond = need - cum[i, j]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.asarray(np.where(beyond > 0, edges[j] + beyond / rates[i, j], edges[j]))
+    with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
+        if hazard.family != "table":
+            found = _INVERSE[hazard.family]({k: np.float64(v) for k, v in hazard.params.items()}, need)
+        else:
+            edges, rates, cum, rows = _table(hazard, level, need.size)
+            j = np.zeros(need.size, dtype=np.int64)
+            for row in np.unique(rows):
+                mine = rows == row
+                j[mine] = np.maximum(np.searchsorted(cum[row], need[mine], side="left") - 1, 0)
+            found = edges[j] + (need - cum[rows, j]) / rates[rows, j]
+    return np.where(need > 0, found, 0.0)
 
 
 def survival(hazard: Hazard, t: npt.ArrayLike, *, level: Levels = None) -> F:

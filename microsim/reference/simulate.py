@@ -145,9 +145,7 @@ class Patient:
         self.ledger.sojourn(self.states[m.state], m, until)
 
 
-def run_reference(
-    study: BoundStudy, *, patients: Sequence[int], seed: int, draw: int = 0, arm: str
-) -> ReferenceRun:
+def run_reference(study: BoundStudy, *, patients: Sequence[int], seed: int, draw: int = 0, arm: str) -> ReferenceRun:
     """Run the numbered patients through the named arm.
 
     patients: numbers below 2**32; seed below 2**64. SimulationError if the arm is unknown or a formula is not usable.
