@@ -25,7 +25,9 @@ def cache_folder() -> Path:
     """Folder for compiled kernels: per user, per content of the kernel sources and versions."""
     digest = hashlib.sha256()
     for source in (Path(__file__), *(f for room in _KERNEL_ROOMS for f in sorted((_PACKAGE / room).glob("*.py")))):
-        digest.update(source.read_bytes())
+        content = source.read_bytes()
+        if b"microsim._jit" in content or source == Path(__file__):  # others hold no compiled code
+            digest.update(content)
     for library in ("numba", "llvmlite", "numpy"):
         digest.update(f"{library}={metadata.version(library)};".encode())
     digest.update(sys.version.encode())

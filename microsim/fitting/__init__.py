@@ -1,0 +1,1 @@
+"""Durations -> fitted distributions with their uncertainty, stored fits, and curves without a family."""

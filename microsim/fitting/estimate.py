@@ -16,6 +16,9 @@ F = npt.NDArray[np.float64]
 
 DECREMENT = 1e-8  # Newton decrement g' V g / 2 below which an optimum counts as found
 STEP = 1e-5
+# Variance, on scales where one unit is large (log shape, log sd, log hazard ratio per SD), above which the likelihood is
+# flat and the estimate has run to a boundary.
+FLAT = 100.0
 
 
 def _starts(family: str, data: Data) -> list[F]:
@@ -30,7 +33,8 @@ def _starts(family: str, data: Data) -> list[F]:
     middle, spread = float(np.mean(logs)), max(float(np.std(logs)), 0.1)
     if family == "lognormal":
         return [np.array([middle, np.log(spread)]), np.array([-log_rate, 0.0]), np.array([-log_rate + 1.0, 0.7])]
-    return [np.array([a, b]) for a in (0.0, -0.5, 0.7) for b in (-log_rate, middle)]
+    corners = [(0.0, -log_rate), (0.7, middle), (-0.5, middle), (0.0, middle), (-0.5, -log_rate), (0.7, -log_rate)]
+    return [np.array(corner) for corner in corners]
 
 
 def _hessian(family: str, w: F, data: Data) -> F:
@@ -68,27 +72,48 @@ def _polish(family: str, w: F, data: Data) -> tuple[F, F, float]:
     return w, information, decrement
 
 
-def _optimise(family: str, data: Data) -> tuple[F, F, float]:
-    best: tuple[float, F] | None = None
+def _best_start(family: str, data: Data) -> F:
+    """The best optimum reached from several starts; two starts that agree end the search."""
+    found: list[tuple[float, F]] = []
     for start in _starts(family, data):
-        x0 = np.concatenate([start, np.zeros(data.covariates.shape[1])])
-        found = optimize.minimize(
+        result = optimize.minimize(
             lambda w: negative_loglik(family, w, data),
-            x0,
+            np.concatenate([start, np.zeros(data.covariates.shape[1])]),
             jac=True,
             method="L-BFGS-B",
             options={"maxiter": 500, "ftol": 1e-14},
         )
-        if np.isfinite(found.fun) and (best is None or found.fun < best[0]):
-            best = float(found.fun), found.x
-    if best is None:
+        if not np.isfinite(result.fun):
+            continue
+        found.append((float(result.fun), np.asarray(result.x)))
+        low = sorted(value for value, _ in found)[:2]
+        if len(low) == 2 and low[1] - low[0] < 1e-6:
+            break
+    if not found:
         raise FitError(
             f"{family}: no starting point gives a finite likelihood; check the durations for extreme values."
         )
-    return _polish(family, best[1], data)
+    return min(found, key=lambda pair: pair[0])[1]
 
 
-def _checked(times: F, events: F, entry: F, covariates: F, weights: F, family: str) -> Data:
+def _flat(family: str, information: F) -> bool:
+    """Whether a shape or a coefficient is hardly determined: the likelihood keeps rising towards a boundary."""
+    variance = np.diag(np.linalg.inv(information))
+    bounded = [name in ("log_shape", "log_sdlog") for name, _ in WORKING[family]]
+    watched = np.array(bounded + [True] * (variance.size - len(bounded)))
+    return bool((variance[watched] > FLAT).any())
+
+
+def _optimise(family: str, data: Data) -> tuple[F, F, str]:
+    """(estimate, information, what is wrong with them or "")."""
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+        w, information, decrement = _polish(family, _best_start(family, data), data)
+        if not np.isfinite(decrement) or _flat(family, information):
+            return w, information, "no interior maximum of the likelihood was found"
+    return w, information, "" if decrement < DECREMENT else "the optimiser stopped before the maximum"
+
+
+def _checked(times: F, events: F, *, entry: F, covariates: F, weights: F, family: str, names: Sequence[str]) -> Data:
     if family not in WORKING:
         raise FitError(f"unknown family {family!r}; known are {', '.join(WORKING)}.")
     for name, array in (("times", times), ("entry", entry), ("covariates", covariates), ("weights", weights)):
@@ -101,14 +126,24 @@ def _checked(times: F, events: F, entry: F, covariates: F, weights: F, family: s
         raise FitError(f"{family}: all {times.size} durations are censored; nothing can be estimated.")
     if total < needed:
         raise FitError(f"{family}: {total} events cannot support {needed} parameters.")
-    constant = np.ptp(covariates, axis=0) == 0 if covariates.size else np.zeros(0, dtype=bool)
-    if constant.any():
-        raise FitError(f"{family}: covariate {int(np.argmax(constant)) + 1} has the same value for everybody.")
+    if (weights <= 0).any():
+        raise FitError(f"{family}: every weight must be above zero.")
+    _check_covariates(family, covariates, names)
     return Data(times, events, entry, covariates, weights)
 
 
-def _unscaled(family: str, w: F, v: F, scale: float) -> tuple[F, F]:
-    """Estimates and covariance from scaled time (t / scale) back to the data's time unit."""
+def _check_covariates(family: str, covariates: F, names: Sequence[str]) -> None:
+    """Each must vary, and none may be a linear combination of those before it and a constant."""
+    for i, name in enumerate(names):
+        if np.ptp(covariates[:, i]) == 0:
+            raise FitError(f"{family}: covariate {name} has the same value for everybody.")
+        centred = covariates[:, : i + 1] - covariates[:, : i + 1].mean(axis=0)
+        if np.linalg.matrix_rank(centred / centred.std(axis=0), tol=1e-7 * np.sqrt(len(covariates))) <= i:
+            raise FitError(f"{family}: covariate {name} is a linear combination of {', '.join(names[:i])}.")
+
+
+def _unscaled(family: str, w: F, v: F, *, scale: float, spread: F) -> tuple[F, F]:
+    """Estimates and covariance from scaled time (t / scale) and covariates (x / spread) back to the data's units."""
     w, stretch = w.copy(), np.ones(w.size)
     for i, (name, _) in enumerate(WORKING[family]):
         if name in ("log_scale", "meanlog"):
@@ -116,19 +151,34 @@ def _unscaled(family: str, w: F, v: F, scale: float) -> tuple[F, F]:
         elif name == "log_rate":
             w[i] -= np.log(scale)
         elif family == "gompertz" and name == "shape":
-            w[i] /= scale
             stretch[i] = 1.0 / scale
-    return w, v * np.outer(stretch, stretch)
+    stretch[len(WORKING[family]) :] = 1.0 / spread
+    return w * stretch, v * np.outer(stretch, stretch)
 
 
-def _warnings(family: str, params: dict[str, float], data: Data, total: int) -> list[str]:
+def _warnings(family: str, params: dict[str, float], data: Data, names: Sequence[str]) -> list[str]:
     notes = []
+    total, needed = int(data.events.sum()), len(WORKING[family]) + data.covariates.shape[1]
     if family == "gompertz" and params["shape"] < 0:
         plateau = float(np.exp(params["rate"] / params["shape"]))
         notes.append(f"negative Gompertz shape: a share of {plateau:.3g} never has the event, so the mean is infinite.")
-    if total < 10 * (len(WORKING[family]) + data.covariates.shape[1]):
-        notes.append(f"only {total} events for {len(WORKING[family]) + data.covariates.shape[1]} parameters.")
+    if total < 10 * needed:
+        notes.append(f"only {total} events for {needed} parameter{'s' if needed > 1 else ''}.")
+    if family in ("lognormal", "loglogistic"):
+        # the other families absorb a shift of a covariate in their scale or rate; these two do not
+        far = np.abs(data.covariates.mean(axis=0)) > 4 * data.covariates.std(axis=0)
+        notes += [
+            f"covariate {name} lies far from zero, where the {family} curve is defined: subtract a typical value."
+            for name, is_far in zip(names, far, strict=True)
+            if is_far
+        ]
     return notes
+
+
+def _remedy(family: str, data: Data) -> str:
+    if np.ptp(data.times[data.events > 0]) == 0 and family != "exponential":
+        return "All events share one time; use the exponential family or times with more digits."
+    return "Use a simpler family, or fewer covariates centred near zero."
 
 
 def fit_family(
@@ -154,26 +204,22 @@ def fit_family(
     raw = _checked(
         t,
         np.asarray(events, dtype=np.float64),
-        np.zeros_like(t) if entry is None else np.asarray(entry, dtype=np.float64),
-        x,
-        np.ones_like(t) if weights is None else np.asarray(weights, dtype=np.float64),
-        family,
+        entry=np.zeros_like(t) if entry is None else np.asarray(entry, dtype=np.float64),
+        covariates=x,
+        weights=np.ones_like(t) if weights is None else np.asarray(weights, dtype=np.float64),
+        family=family,
+        names=names,
     )
-    scale = float(np.median(t))
-    data = Data(t / scale, raw.events, raw.entry / scale, x, raw.weights)
-    w, information, decrement = _optimise(family, data)
-    converged = decrement < DECREMENT
-    if strict and not converged:
-        raise FitError(
-            f"{family}: no interior maximum of the likelihood was found ({int(raw.events.sum())} events). "
-            "Use a simpler family, or fewer covariates."
-        )
-    v = np.asarray(np.linalg.inv(information) if np.isfinite(decrement) else np.full_like(information, np.nan))
+    scale, spread = float(np.median(t)), x.std(axis=0)
+    data = Data(t / scale, raw.events, raw.entry / scale, x / spread, raw.weights)
+    w, information, wrong = _optimise(family, data)
+    if strict and wrong:
+        raise FitError(f"{family}: {wrong} ({int(raw.events.sum())} events). {_remedy(family, raw)}")
+    v = np.full_like(information, np.nan) if wrong else np.asarray(np.linalg.inv(information))
     loglik = -negative_loglik(family, w, data)[0] - float(np.sum(raw.weights * raw.events)) * np.log(scale)
-    w, v = _unscaled(family, w, v, scale)
+    w, v = _unscaled(family, w, v, scale=scale, spread=spread)
     params = {name: float(value) for name, value in natural(family, w).items()}
     first = len(WORKING[family])
-    notes = _warnings(family, params, raw, int(raw.events.sum()))
     return Fit(
         family=family,
         params=params,
@@ -185,6 +231,6 @@ def fit_family(
         n=t.size,
         n_events=int(raw.events.sum()),
         person_time=float(np.sum(t - raw.entry)),
-        converged=bool(converged),
-        warnings=(*notes, *(() if converged else ("no interior maximum of the likelihood was found.",))),
+        converged=not wrong,
+        warnings=(*_warnings(family, params, raw, names), *((f"{wrong}.",) if wrong else ())),
     )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import tempfile
@@ -72,20 +73,28 @@ def _read(file: Path) -> Fit | None:
         return None
 
 
+def _write(file: Path, fit: Fit) -> None:
+    """Whole or not at all: a scratch file beside the target, then renamed."""
+    file.parent.mkdir(parents=True, exist_ok=True)
+    with tempfile.NamedTemporaryFile("w", dir=file.parent, suffix=".part", delete=False, encoding="utf-8") as scratch:
+        part = Path(scratch.name)
+    try:
+        part.write_text(json.dumps(fit.to_dict()), encoding="utf-8")
+        os.replace(part, file)
+    finally:
+        part.unlink(missing_ok=True)
+
+
 def fit_or_read(task: Task, folder: Path | None) -> Fit:
     """The fit of a task, from ``folder`` if stored there. A folder that cannot be written is no obstacle."""
     if folder is None:
         return make_fit(task)
-    file = folder / f"{task.content_hash[:32]}-{VERSION}.json"
+    file = folder / f"{task.name}-{task.content_hash[:32]}-{VERSION}.json"
     known = _read(file)
     if known is not None and known.converged:
         return known
     fit = make_fit(task)
-    try:
-        folder.mkdir(parents=True, exist_ok=True)
-        with tempfile.NamedTemporaryFile("w", dir=folder, delete=False, encoding="utf-8") as scratch:
-            json.dump(fit.to_dict(), scratch)
-        os.replace(scratch.name, file)
-    except OSError:
-        return fit
+    # a fit that cannot be stored is still a fit
+    with contextlib.suppress(OSError):
+        _write(file, fit)
     return fit

