@@ -114,11 +114,12 @@ def _scale_threshold(row, threshold, rows, out, w):
 @spliced
 def draw_next(p, clock, key0, key1, draw, first_patient, pick, words, accumulators, remaining, out, n):
     """New thresholds of a clock for the patients pick[:n]; the firing number is how often the clock has fired."""
-    fired = accumulators[p.sizes[0] + clock]
+    sizes, stream = p.sizes, p.stream
+    fired = accumulators[sizes[0] + clock]
     for j in range(n):
         words[0, j] = np.uint64(first_patient + pick[j])
         words[1, j] = np.uint64(np.int64(fired[pick[j]]))
-    draw_thresholds(key0, key1, words[0], p.stream[clock], words[1], draw, out, n)
+    draw_thresholds(key0, key1, words[0], stream[clock], words[1], draw, out, n)
     carried = remaining[clock]
     for j in range(n):
         carried[pick[j]] = out[j]
@@ -127,7 +128,8 @@ def draw_next(p, clock, key0, key1, draw, first_patient, pick, words, accumulato
 @spliced
 def _draw_unread(p, arc, key0, key1, draw, first_patient, idx, pick, words, accumulators, remaining, threshold, out, w):
     """First arming of a clock: read the threshold of the patients who have none yet."""
-    clock = p.arcs[arc, CLOCK]
+    arcs = p.arcs
+    clock = arcs[arc, CLOCK]
     n = 0
     for i in range(w):
         pick[n] = idx[i]
@@ -142,13 +144,14 @@ def _draw_unread(p, arc, key0, key1, draw, first_patient, idx, pick, words, accu
 def first_firing(p, state, key0, key1, draw, first_patient, idx, cause, pick, level, words, remaining, accumulators,
                   attributes, rows, x, w):  # fmt: skip
     """x[BEST] = time to the first firing among the clocks of the state, cause = its arc (or -1)."""
+    arc_par, arcs, numbers, sizes, states = p.arc_par, p.arcs, p.numbers, p.sizes, p.states
     best = x[BEST]
     for i in range(w):
         best[i] = np.inf
         cause[i] = -1
-    for arc in range(p.states[state, ARC], p.states[state, ARC_END]):
+    for arc in range(states[state, ARC], states[state, ARC_END]):
         threshold, scaled, origin, wait = x[THRESHOLD], x[SCALED], x[ORIGIN], x[WAIT]
-        carried = remaining[p.arcs[arc, CLOCK]]
+        carried = remaining[arcs[arc, CLOCK]]
         unread = 0
         for i in range(w):
             threshold[i] = carried[idx[i]]
@@ -157,13 +160,13 @@ def first_firing(p, state, key0, key1, draw, first_patient, idx, cause, pick, le
             _draw_unread(
                 p, arc, key0, key1, draw, first_patient, idx, pick, words, accumulators, remaining, threshold, scaled, w
             )
-        _scale_threshold(p.arcs[arc, RATIO], threshold, rows, scaled, w)
-        fill_origin(p.arcs[arc, SCALE], p.sizes[6], p.numbers[4], idx, x[T0], attributes, origin, w)
-        family = p.arcs[arc, FAMILY]
+        _scale_threshold(arcs[arc, RATIO], threshold, rows, scaled, w)
+        fill_origin(arcs[arc, SCALE], sizes[6], numbers[4], idx, x[T0], attributes, origin, w)
+        family = arcs[arc, FAMILY]
         if family == kernels.TABLE:
             _table_firing(p, arc, idx, level, cause, attributes, x, w)
             continue
-        kernels.waiting_time(family, p.arc_par[arc], origin, p.arcs[arc, SCALE] == 0, scaled, x[H], x[C], wait, w)
+        kernels.waiting_time(family, arc_par[arc], origin, arcs[arc, SCALE] == 0, scaled, x[H], x[C], wait, w)
         for i in range(w):
             earlier = wait[i] < best[i]
             best[i] = wait[i] if earlier else best[i]
@@ -173,18 +176,19 @@ def first_firing(p, state, key0, key1, draw, first_patient, idx, cause, pick, le
 @spliced
 def _table_firing(p, arc, idx, level, cause, attributes, x, w):
     """Tables come last: compare consumed hazards first, and invert only for patients whose clock fires before the best."""
-    horizon = p.numbers[0]
+    arc_par, arcs, numbers, table_cum, table_rate = p.arc_par, p.arcs, p.numbers, p.table_cum, p.table_rate
+    horizon = numbers[0]
     t0, best, origin, scaled, target, at_end, end = x[T0], x[BEST], x[ORIGIN], x[SCALED], x[H], x[C], x[TMP]
-    par = p.arc_par[arc]
-    fill_level(p.arcs[arc, LEVEL], p.arcs[arc, STRIDE], p.arcs[arc, BY], idx, attributes, level, w)
-    kernels.table_cumulative(par, level, p.table_cum, p.table_rate, origin, target, w)
+    par = arc_par[arc]
+    fill_level(arcs[arc, LEVEL], arcs[arc, STRIDE], arcs[arc, BY], idx, attributes, level, w)
+    kernels.table_cumulative(par, level, table_cum, table_rate, origin, target, w)
     at_entry = x[USED]
     for i in range(w):
         at_entry[i] = target[i]
         stop = horizon - t0[i]
         end[i] = origin[i] + (best[i] if best[i] < stop else stop)
         target[i] = target[i] + scaled[i]
-    kernels.table_cumulative(par, level, p.table_cum, p.table_rate, end, at_end, w)
+    kernels.table_cumulative(par, level, table_cum, table_rate, end, at_end, w)
     for i in range(w):
         at_entry[i] = at_end[i] - at_entry[i]
     n = 0
@@ -195,7 +199,7 @@ def _table_firing(p, arc, idx, level, cause, attributes, x, w):
             lanes[n] = i
             level[n] = level[i]
             n += 1
-    kernels.table_inverse(par, level, p.table_cum, p.table_rate, sub1, sub2, n)
+    kernels.table_inverse(par, level, table_cum, table_rate, sub1, sub2, n)
     for j in range(n):
         i = np.int64(lanes[j])
         d = sub2[j] - origin[i]
@@ -208,45 +212,52 @@ def _table_firing(p, arc, idx, level, cause, attributes, x, w):
 @spliced
 def arc_consumption(p, arc, idx, t0, duration, level, attributes, x, out, w):
     """out[i] = integrated hazard of the arc's family over the sojourn, without its ratio. Uses x[ORIGIN, H, C]."""
+    arc_par, arcs, numbers, sizes, table_cum, table_rate = (
+        p.arc_par,
+        p.arcs,
+        p.numbers,
+        p.sizes,
+        p.table_cum,
+        p.table_rate,
+    )
     origin = x[ORIGIN]
-    fill_origin(p.arcs[arc, SCALE], p.sizes[6], p.numbers[4], idx, t0, attributes, origin, w)
-    if p.arcs[arc, FAMILY] == kernels.TABLE:
+    fill_origin(arcs[arc, SCALE], sizes[6], numbers[4], idx, t0, attributes, origin, w)
+    if arcs[arc, FAMILY] == kernels.TABLE:
         h, c = x[H], x[C]
-        fill_level(p.arcs[arc, LEVEL], p.arcs[arc, STRIDE], p.arcs[arc, BY], idx, attributes, level, w)
-        kernels.table_cumulative(p.arc_par[arc], level, p.table_cum, p.table_rate, origin, h, w)
+        fill_level(arcs[arc, LEVEL], arcs[arc, STRIDE], arcs[arc, BY], idx, attributes, level, w)
+        kernels.table_cumulative(arc_par[arc], level, table_cum, table_rate, origin, h, w)
         for i in range(w):
             c[i] = origin[i] + duration[i]
-        kernels.table_cumulative(p.arc_par[arc], level, p.table_cum, p.table_rate, c, out, w)
+        kernels.table_cumulative(arc_par[arc], level, table_cum, table_rate, c, out, w)
         for i in range(w):
             out[i] = out[i] - h[i]
     else:
-        kernels.consumed(
-            p.arcs[arc, FAMILY], p.arc_par[arc], origin, p.arcs[arc, SCALE] == 0, duration, x[H], x[C], out, w
-        )
+        kernels.consumed(arcs[arc, FAMILY], arc_par[arc], origin, arcs[arc, SCALE] == 0, duration, x[H], x[C], out, w)
 
 
 @spliced
 def carry_thresholds(p, state, idx, cause, lanes, pick, level, remaining, attributes, rows, x, w):
     """Whoever lost keeps what was not consumed, unless the patient has reached a state without clocks."""
+    arcs, states = p.arcs, p.states
     t0_, t1_, ratio_ = x[T0], x[T1], x[TMP]
     n_alive = 0
     for i in range(w):
         a = cause[i]
-        goes_on = a >= 0 and p.states[p.arcs[a, TARGET], ARC_END] > p.states[p.arcs[a, TARGET], ARC]
+        goes_on = a >= 0 and states[arcs[a, TARGET], ARC_END] > states[arcs[a, TARGET], ARC]
         lanes[n_alive] = i
         n_alive += 1 if goes_on else 0
-    for arc in range(p.states[state, ARC], p.states[state, ARC_END]):
+    for arc in range(states[state, ARC], states[state, ARC_END]):
         n = 0
         # what the last table consumed up to the first firing is known from the search for it
-        known = arc == p.states[state, ARC_END] - 1 and p.arcs[arc, FAMILY] == kernels.TABLE
+        known = arc == states[state, ARC_END] - 1 and arcs[arc, FAMILY] == kernels.TABLE
         t0, duration, used = x[SUB1], x[SUB2], x[OUT]
         for j in range(n_alive):
             level[n] = lanes[j]
             n += 1 if cause[lanes[j]] != arc else 0
         if n == 0:
             continue
-        known_used, has_ratio = x[USED], p.arcs[arc, RATIO] >= 0
-        ratio_row = rows[max(p.arcs[arc, RATIO], 0)]
+        known_used, has_ratio = x[USED], arcs[arc, RATIO] >= 0
+        ratio_row = rows[max(arcs[arc, RATIO], 0)]
         for j in range(n):
             i = level[j]
             pick[j] = idx[i]
@@ -256,7 +267,7 @@ def carry_thresholds(p, state, idx, cause, lanes, pick, level, remaining, attrib
             ratio_[j] = ratio_row[i] if has_ratio else 1.0
         if not known:
             arc_consumption(p, arc, pick, t0, duration, level, attributes, x, used, n)
-        carried = remaining[p.arcs[arc, CLOCK]]
+        carried = remaining[arcs[arc, CLOCK]]
         for j in range(n):
             left = carried[pick[j]] - ratio_[j] * used[j]
             carried[pick[j]] = left if left > 0.0 else 0.0

@@ -137,13 +137,14 @@ def _write_log(state, idx, cause, memory, log_index, log_value, status, x, w):
 @spliced
 def _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, present, inverse_cell, x, n):
     """Move the n patients in ``lanes`` along the arc."""
+    arcs, fields, numbers, sizes, states = p.arcs, p.fields, p.numbers, p.sizes, p.states
     t1_, cost1_, effect1_ = x[T1], x[COST1], x[EFFECT1]
-    target = p.arcs[arc, TARGET]
-    fired = accumulators[p.sizes[0] + p.arcs[arc, CLOCK]]
+    target = arcs[arc, TARGET]
+    fired = accumulators[sizes[0] + arcs[arc, CLOCK]]
     for j in range(n):
         fired[pick[j]] += 1.0
-    if p.states[target, TRIVIAL] == 1:
-        horizon = p.numbers[0]
+    if states[target, TRIVIAL] == 1:
+        horizon = numbers[0]
         rest = accumulators[target]
         for j in range(n):
             rest[pick[j]] += horizon - t1_[lanes[j]]
@@ -157,10 +158,10 @@ def _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, pr
         i = lanes[j]
         entry_time[pick[j]] = t1_[i]
         cost[pick[j]] = cost1_[i]
-    if p.numbers[1] != p.numbers[2]:
+    if numbers[1] != numbers[2]:
         for j in range(n):
             effect[pick[j]] = effect1_[lanes[j]]
-    _update_memory(p.fields, state, target, pick, lanes, memory, x, n)
+    _update_memory(fields, state, target, pick, lanes, memory, x, n)
     at = counts[target]
     for j in range(n):
         waiting[target, at + j] = pick[j]
@@ -171,10 +172,20 @@ def _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, pr
 def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, remaining, accumulators, rows, x, ints, words,
              waiting, counts, present, log_index, log_value, status, w):  # fmt: skip
     """One block of one state: from entry to exit. False if the status says stop."""
+    arcs, checks, flow, gather, numbers, sizes, states, tape = (
+        p.arcs,
+        p.checks,
+        p.flow,
+        p.gather,
+        p.numbers,
+        p.sizes,
+        p.states,
+        p.tape,
+    )
     t0_, t1_, cost0_, effect0_, best_ = x[T0], x[T1], x[COST0], x[EFFECT0], x[BEST]
     idx, cause, lanes, pick, level = ints[0], ints[1], ints[2], ints[3], ints[4]
-    horizon, annual, years = p.numbers[0], p.numbers[3], p.numbers[4]
-    inverse_cell, one_rate = 1.0 / p.numbers[5], p.numbers[1] == p.numbers[2]
+    horizon, annual, years = numbers[0], numbers[3], numbers[4]
+    inverse_cell, one_rate = 1.0 / numbers[5], numbers[1] == numbers[2]
     for i in range(w):
         t0_[i] = memory[0, idx[i]]
     for i in range(w):
@@ -183,9 +194,9 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
         for i in range(w):
             effect0_[i] = memory[2, idx[i]]
     fill_rows(
-        p.gather,
-        p.states[state, GATHER],
-        p.states[state, GATHER_END],
+        gather,
+        states[state, GATHER],
+        states[state, GATHER_END],
         years,
         idx,
         idx,
@@ -195,8 +206,8 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
         rows,
         w,
     )
-    run_tape(p.tape, p.states[state, TAPE], p.states[state, TAPE_END], rows, w)
-    if not _check(p.checks, p.states[state, CHECK], p.states[state, CHECK_END], idx, rows, status, w):
+    run_tape(tape, states[state, TAPE], states[state, TAPE_END], rows, w)
+    if not _check(checks, states[state, CHECK], states[state, CHECK_END], idx, rows, status, w):
         return False
     add_entry_amounts(p, state, idx, accumulators, rows, x, w)
     first_firing(p, state, key0, key1, draw, first_patient, idx, cause, pick, level, words, remaining, accumulators, attributes,
@@ -206,17 +217,17 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
         over = t > horizon
         t1_[i] = horizon if over else t
         cause[i] = -1 if over else cause[i]
-    discount_integral(p.numbers[1], annual, years, x[T1], x[COST1], w)
+    discount_integral(numbers[1], annual, years, x[T1], x[COST1], w)
     if not one_rate:
-        discount_integral(p.numbers[2], annual, years, x[T1], x[EFFECT1], w)
-    first, last = p.states[state, FLOW], p.states[state, FLOW_END]
-    add_rewards(p.flow, first, last, state, p.sizes[0], p.sizes[1], one_rate, idx, accumulators, rows, x, w)
+        discount_integral(numbers[2], annual, years, x[T1], x[EFFECT1], w)
+    first, last = states[state, FLOW], states[state, FLOW_END]
+    add_rewards(flow, first, last, state, sizes[0], sizes[1], one_rate, idx, accumulators, rows, x, w)
     if present.shape[0] > 0:
         _count_presence(state, cause, present, inverse_cell, horizon, x, w)
     if log_value.shape[1] > 0 and not _write_log(state, idx, cause, memory, log_index, log_value, status, x, w):
         return False
     carry_thresholds(p, state, idx, cause, lanes, pick, level, remaining, attributes, rows, x, w)
-    for arc in range(p.states[state, ARC], p.states[state, ARC_END]):
+    for arc in range(states[state, ARC], states[state, ARC_END]):
         n = 0
         for i in range(w):
             lanes[n] = i
@@ -225,13 +236,13 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
         if n == 0:
             continue
         _leave(p, arc, state, lanes, pick, memory, accumulators, waiting, counts, present, inverse_cell, x, n)
-        if p.states[p.arcs[arc, TARGET], TRIVIAL] == 1:
+        if states[arcs[arc, TARGET], TRIVIAL] == 1:
             continue
-        if p.arcs[arc, REARMS] == 1:
-            clock = p.arcs[arc, CLOCK]
+        if arcs[arc, REARMS] == 1:
+            clock = arcs[arc, CLOCK]
             draw_next(p, clock, key0, key1, draw, first_patient, pick, words, accumulators, remaining, x[OUT], n)
         else:
-            carried = remaining[p.arcs[arc, CLOCK]]
+            carried = remaining[arcs[arc, CLOCK]]
             for j in range(n):
                 carried[pick[j]] = -1.0
     return True
@@ -240,14 +251,15 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
 @spliced
 def _begin(p, n, start, memory, remaining, accumulators, rows, waiting, counts, present, log):
     """Reset what patients carry, and put each into the list of its first state."""
+    consts, fields = p.consts, p.fields
     memory[:, :n] = 0.0
     accumulators[:, :n] = 0.0
     remaining[:, :n] = -1.0
     counts[:] = 0
-    for c in range(p.consts.size):
-        rows[c, :] = p.consts[c]
-    for f in range(p.fields.shape[0]):
-        kind, of = p.fields[f, 0], p.fields[f, 1]
+    for c in range(consts.size):
+        rows[c, :] = consts[c]
+    for f in range(fields.shape[0]):
+        kind, of = fields[f, 0], fields[f, 1]
         for i in range(n):
             here = start[i] == of
             value = 0.0
@@ -275,9 +287,10 @@ def run_chunk(p, key0, key1, draw, first_patient, n, attributes, start, memory, 
     float64[clock, chunk]; accumulators float64[acc, chunk]; waiting int64[state, chunk]; present float64[state, edge + 1]
     or with no rows when not wanted; log_value float64[3 + field, capacity] or with no columns; key0, key1, draw uint64.
     """
+    sizes = p.sizes
     status[:] = 0
     _begin(p, n, start, memory, remaining, accumulators, rows, waiting, counts, present, log_value)
-    n_states = p.sizes[0]
+    n_states = sizes[0]
     while True:
         state, most = 0, 0
         for s in range(n_states):

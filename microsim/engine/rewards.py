@@ -64,26 +64,27 @@ def add_rewards(flow, first, last, state, n_states, n_clocks, one_rate, idx, acc
 @spliced
 def add_entry_amounts(p, state, idx, accumulators, rows, x, w):
     """One-off amounts at entry by a transition (entry time above zero), at their time."""
+    lump, numbers, states = p.lump, p.numbers, p.states
     t0_ = x[T0]
-    annual, years = p.numbers[3], p.numbers[4]
+    annual, years = numbers[3], numbers[4]
     for which in range(2):
-        const_row = p.states[state, ENTRY_COST + which]
+        const_row = states[state, ENTRY_COST + which]
         needed = const_row >= 0
-        for n in range(p.states[state, LUMP], p.states[state, LUMP_END]):
-            needed = needed or p.lump[n, 3] == which
+        for n in range(states[state, LUMP], states[state, LUMP_END]):
+            needed = needed or lump[n, 3] == which
         if not needed:
             continue
         factor = x[OUT]
-        discount_factor(p.numbers[1 + which], annual, years, x[T0], factor, w)
+        discount_factor(numbers[1 + which], annual, years, x[T0], factor, w)
         for i in range(w):
             factor[i] = factor[i] if t0_[i] > 0.0 else 0.0
         if const_row >= 0:
             total = accumulators[const_row]
             for i in range(w):
                 total[idx[i]] += factor[i]
-        for n in range(p.states[state, LUMP], p.states[state, LUMP_END]):
-            if p.lump[n, 3] == which:
-                row, plain, discounted = rows[p.lump[n, 0]], accumulators[p.lump[n, 1]], accumulators[p.lump[n, 2]]
+        for n in range(states[state, LUMP], states[state, LUMP_END]):
+            if lump[n, 3] == which:
+                row, plain, discounted = rows[lump[n, 0]], accumulators[lump[n, 1]], accumulators[lump[n, 2]]
                 for i in range(w):
                     plain[idx[i]] += row[i] if t0_[i] > 0.0 else 0.0
                     discounted[idx[i]] += row[i] * factor[i]

@@ -80,6 +80,7 @@ def tally_paths(
     present float64[s, T+2]; full, part float64[s, T+1] (see ``exposure_of``); entries float64[s, T]; events
     float64[a, T]; full_d, part_d float64[s, D+1]; events_d float64[a, D].
     """
+    arcs, states = p.arcs, p.states
     horizon = time[-1]
     last = time.size - 2
     for block in range(n_blocks):
@@ -93,11 +94,11 @@ def tally_paths(
             _spread(sojourn, full_d[s], part_d[s], 0.0, d, 0, cd, 1.0)
             if arc < 0:
                 continue
-            target = p.arcs[arc, TARGET]
+            target = arcs[arc, TARGET]
             events[arc, c1] += 1.0
             events_d[arc, cd] += 1.0
             entries[target, c1] += 1.0
-            if p.states[target, TRIVIAL] == 1:
+            if states[target, TRIVIAL] == 1:
                 _present(time, present[target], t1, c1, horizon, last, False)
                 _spread(time, full[target], part[target], t1, horizon, c1, last, 1.0)
                 rest = horizon - t1
@@ -151,24 +152,33 @@ def _integrate_arcs(p, state, edges, start, stop, idx, level, attributes, x, lan
 
     x rows: 0 entry time, 2 origin, 3 ratio, 4 hazard at entry (3 is filled by the caller per arc).
     """
+    arc_par, arcs, numbers, sizes, states, table_cum, table_rate = (
+        p.arc_par,
+        p.arcs,
+        p.numbers,
+        p.sizes,
+        p.states,
+        p.table_cum,
+        p.table_rate,
+    )
     done = 0
     while done < w:
         n, done = _cut(edges, start, stop, done, w, lane, cell, end)
-        for arc in range(p.states[state, ARC], p.states[state, ARC_END]):
-            family = p.arcs[arc, FAMILY]
+        for arc in range(states[state, ARC], states[state, ARC_END]):
+            family = arcs[arc, FAMILY]
             if family == kernels.EXPONENTIAL:
                 continue
-            fill_origin(p.arcs[arc, SCALE], p.sizes[6], p.numbers[4], idx, x[0], attributes, x[2], w)
+            fill_origin(arcs[arc, SCALE], sizes[6], numbers[4], idx, x[0], attributes, x[2], w)
             _clock_values(lane, end, start, x[2], c, n)
             if family == kernels.TABLE:
-                fill_level(p.arcs[arc, LEVEL], p.arcs[arc, STRIDE], p.arcs[arc, BY], idx, attributes, level, w)
+                fill_level(arcs[arc, LEVEL], arcs[arc, STRIDE], arcs[arc, BY], idx, attributes, level, w)
                 _lane_levels(lane, level, levels, n)
-                kernels.table_cumulative(p.arc_par[arc], level, p.table_cum, p.table_rate, x[2], x[4], w)
-                kernels.table_cumulative(p.arc_par[arc], levels, p.table_cum, p.table_rate, c, h, n)
+                kernels.table_cumulative(arc_par[arc], level, table_cum, table_rate, x[2], x[4], w)
+                kernels.table_cumulative(arc_par[arc], levels, table_cum, table_rate, c, h, n)
             else:
-                kernels.cumulative(family, p.arc_par[arc], x[2], x[4], w)
-                kernels.cumulative(family, p.arc_par[arc], c, h, n)
-            _collect(lane, cell, h, x[4], x[5 + arc - p.states[state, ARC]], out[arc], n)
+                kernels.cumulative(family, arc_par[arc], x[2], x[4], w)
+                kernels.cumulative(family, arc_par[arc], c, h, n)
+            _collect(lane, cell, h, x[4], x[5 + arc - states[state, ARC]], out[arc], n)
 
 
 @helper
@@ -202,8 +212,19 @@ def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, 
     same on the sojourn grid; reward_full, reward_part float64[r, s, T+1]; lump float64[r, s, T]. rows and x are block
     scratch (x needs 5 + arcs of a state rows), lane, cell, end, levels, c, h scratch of SEGMENTS.
     """
-    for k in range(p.consts.size):
-        rows[k, :] = p.consts[k]
+    arc_par, arcs, consts, gather, lump_row, numbers, reward_row, states, tape = (
+        p.arc_par,
+        p.arcs,
+        p.consts,
+        p.gather,
+        p.lump_row,
+        p.numbers,
+        p.reward_row,
+        p.states,
+        p.tape,
+    )
+    for k in range(consts.size):
+        rows[k, :] = consts[k]
     for block in range(n_blocks):
         s, first, w = log_index[2, 3 * block], log_index[2, 3 * block + 1], log_index[2, 3 * block + 2]
         idx, at, level = np.empty(w, np.int64), np.empty(w, np.int64), np.empty(w, np.int64)
@@ -213,23 +234,23 @@ def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, 
             x[0, i] = log_value[0, first + i]
             x[1, i] = log_value[1, first + i]
             x[3, i] = log_value[2, first + i]
-        fill_rows(p.gather, p.states[s, GATHER], p.states[s, GATHER_END], p.numbers[4], idx, at, x[0], attributes, log_value,
+        fill_rows(gather, states[s, GATHER], states[s, GATHER_END], numbers[4], idx, at, x[0], attributes, log_value,
                   rows, w)  # fmt: skip
-        run_tape(p.tape, p.states[s, TAPE], p.states[s, TAPE_END], rows, w)
-        for r in range(p.reward_row.shape[1]):
-            row = p.reward_row[s, r]
+        run_tape(tape, states[s, TAPE], states[s, TAPE_END], rows, w)
+        for r in range(reward_row.shape[1]):
+            row = reward_row[s, r]
             if row > 0:  # row 0 is the constant zero
-                factor = p.numbers[4] if r == 0 else 1.0
+                factor = numbers[4] if r == 0 else 1.0
                 _spread_block(time, reward_full[r, s], reward_part[r, s], x[0], x[1], rows[row], factor, w)
-            row = p.lump_row[s, r]
+            row = lump_row[s, r]
             if row >= 0:
                 _spread_lumps(time, lump[r, s], x[0], rows[row], w)
         others = 0
-        for arc in range(p.states[s, ARC], p.states[s, ARC_END]):
-            ratio = x[5 + arc - p.states[s, ARC]]
-            _ratios(p.arcs[arc, RATIO], rows, ratio, w)
-            if p.arcs[arc, FAMILY] == kernels.EXPONENTIAL:
-                _spread_block(time, full[arc], part[arc], x[0], x[1], ratio, p.arc_par[arc, 0], w)
+        for arc in range(states[s, ARC], states[s, ARC_END]):
+            ratio = x[5 + arc - states[s, ARC]]
+            _ratios(arcs[arc, RATIO], rows, ratio, w)
+            if arcs[arc, FAMILY] == kernels.EXPONENTIAL:
+                _spread_block(time, full[arc], part[arc], x[0], x[1], ratio, arc_par[arc, 0], w)
             else:
                 others += 1
         if others > 0:
@@ -243,11 +264,12 @@ def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, 
 @spliced
 def _sojourn_grid(p, s, edges, idx, level, attributes, x, lane, cell, end, levels, c, h, out, full, part, others, w):
     """The same hazards by time since entry."""
+    arc_par, arcs, states = p.arc_par, p.arcs, p.states
     for i in range(w):
         x[1, i] = 0.0
-    for arc in range(p.states[s, ARC], p.states[s, ARC_END]):
-        if p.arcs[arc, FAMILY] == kernels.EXPONENTIAL:
-            _spread_block(edges, full[arc], part[arc], x[1], x[3], x[5 + arc - p.states[s, ARC]], p.arc_par[arc, 0], w)
+    for arc in range(states[s, ARC], states[s, ARC_END]):
+        if arcs[arc, FAMILY] == kernels.EXPONENTIAL:
+            _spread_block(edges, full[arc], part[arc], x[1], x[3], x[5 + arc - states[s, ARC]], arc_par[arc, 0], w)
     if others > 0:
         _integrate_arcs(p, s, edges, x[1], x[3], idx, level, attributes, x, lane, cell, end, levels, c, h, out, w)
 

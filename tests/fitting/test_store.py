@@ -11,8 +11,6 @@ import pytest
 from microsim.errors import FitError
 from microsim.fitting import store
 from microsim.fitting.store import fit_or_read
-from microsim.fitting.transition import fit_transition
-from microsim.hazards.families import cumulative
 from microsim.study.fit_task import FitTask, sealed
 
 
