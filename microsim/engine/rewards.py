@@ -45,7 +45,7 @@ def add_rewards(flow, first, last, state, n_states, n_clocks, one_rate, idx, acc
     t0_, t1_, cost0_, cost1_, effect0_, effect1_ = x[T0], x[T1], x[COST0], x[COST1], x[EFFECT0], x[EFFECT1]
     time = accumulators[state]
     cost = accumulators[n_states + n_clocks + state]
-    effect = accumulators[2 * n_states + n_clocks + state]
+    effect = accumulators[(n_states if one_rate else 2 * n_states) + n_clocks + state]  # one rate: no rows of its own
     for i in range(w):
         time[idx[i]] += t1_[i] - t0_[i]
     for i in range(w):

@@ -18,7 +18,7 @@ from microsim.fitting.estimate import fit_family
 from microsim.fitting.fit import Fit
 
 F = npt.NDArray[np.float64]
-VERSION = 1  # of the estimation code: raise it when estimates may change
+VERSION = 2  # of the estimation code: raise it when estimates may change
 
 
 class Task(Protocol):

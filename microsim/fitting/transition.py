@@ -68,7 +68,7 @@ def _round_times(longest: float) -> F:
     raw = longest / 5.5
     magnitude = 10.0 ** np.floor(np.log10(raw))
     step = float(min((m * magnitude for m in (1, 1.5, 2, 2.5, 3, 4, 5, 6, 8, 10)), key=lambda s: abs(raw / s - 1)))
-    return np.minimum(np.arange(0.0, longest * (1 + 1e-9), step), longest)
+    return np.asarray(np.minimum(np.arange(0.0, longest * (1 + 1e-9), step), longest), dtype=np.float64)
 
 
 def make_curve(task: Task, fit: Fit) -> Curve:

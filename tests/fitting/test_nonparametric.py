@@ -28,8 +28,8 @@ def test_the_published_remission_example_is_reproduced() -> None:
         assert error == pytest.approx(printed_error, abs=5e-5)
 
 
-# Kaplan and Meier (1958), section 3 example: losses at 1, 2, 7 and 12, deaths at 0.8, 3.1, 5.4 and 9.2 (from memory,
-# recomputed by hand: 7/8, 7/8 x 4/5, 7/8 x 4/5 x 3/4, 7/8 x 4/5 x 3/4 x 1/2).
+# Kaplan and Meier (1958), their own example of eight: deaths at 0.8, 3.1, 5.4 and 9.2, losses at 1.0, 2.7, 7.0 and 12.1
+# (data as quoted in github.com/therneau/survival issue 80; 7/8, 7/10, 21/40 and 21/80 worked by hand).
 def test_kaplan_and_meiers_own_example() -> None:
     curve = kaplan_meier([0.8, 1.0, 2.7, 3.1, 5.4, 7.0, 9.2, 12.1], [1, 0, 0, 1, 1, 0, 1, 0])
     np.testing.assert_allclose(
@@ -58,6 +58,11 @@ def test_late_entry_leaves_people_out_of_earlier_risk_sets() -> None:
         2,
         2,
     ]
+
+
+def test_who_enters_at_a_time_is_not_at_risk_then_and_who_leaves_still_is() -> None:
+    times, entry = np.array([2.0, 3.0, 4.0]), np.array([0.0, 2.0, 1.0])
+    assert list(at_risk(times, entry, np.array([2.0, 2.5, 3.0, 4.0, 4.5]))) == [2, 2, 2, 1, 0]
 
 
 def test_nelson_aalen_adds_deaths_over_numbers_at_risk() -> None:

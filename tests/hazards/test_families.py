@@ -167,6 +167,11 @@ def test_a_table_s_inverse_is_the_earliest_time_that_reaches_the_amount(data: st
     )
 
 
+def test_an_amount_reached_before_a_pause_is_reached_before_it() -> None:
+    h = Hazard("table", edges=(0.0, 1.0, 2.0, 3.0), rates=((0.5, 0.0, 1.0),))
+    np.testing.assert_array_equal(inverse(h, [0.25, 0.5, 0.75]), [0.5, 1.0, 2.25])
+
+
 def test_changing_the_unit_of_a_table_changes_only_the_unit() -> None:
     h = Hazard("table", edges=(40.0, 41.0, 43.0), rates=((0.1, 0.2),))
     np.testing.assert_allclose(cumulative(rescale(h, 12.0), TIMES * 12.0), cumulative(h, TIMES), rtol=1e-12)
