@@ -94,8 +94,8 @@ class ChunkRunner:
         workspace: Workspace = self.local.workspace
         return workspace
 
-    def _simulate(self, arm: int, first: int, attributes: F, start: npt.NDArray[np.int64]) -> F:
-        """Outcomes of the arm's patients, float64[m, n]; the log stays in the workspace."""
+    def _simulate(self, arm: int, first: int, attributes: F, start: npt.NDArray[np.int64], out: F) -> None:
+        """Fill out float64[m, n] with the outcomes of the arm's patients; the log stays in the workspace."""
         ws, program, n = self._workspace(), self.plan.programs[arm], start.size
         while True:
             queue.run_chunk(
@@ -107,10 +107,8 @@ class ChunkRunner:
             ws.resize_log(2 * ws.log_value.shape[1])
         if ws.status[0] != columns.OK:
             self._fail(arm, first, attributes)
-        out = np.empty((len(self.plan.layout.outcomes), n))
         sums = program.outcomes
         queue.collect_outcomes(sums.ptr, sums.row, sums.weight, sums.constant, n, ws.accumulators, out)
-        return out
 
     def _fail(self, arm: int, first: int, attributes: F) -> None:
         """Turn the workspace's status into an exception that names patient, state, formula and memory."""
@@ -159,22 +157,22 @@ class ChunkRunner:
         ids = np.arange(first, first + patients, dtype=np.int64)
         attributes = np.ascontiguousarray(population.sample(plan.study.population, ids, seed=plan.seed, draw=plan.draw))
         start = population.sample_start(plan.study.arms[0], ids, seed=plan.seed, draw=plan.draw)
-        outcomes, paths, hazards, logs = [], [], {}, []
-        for arm in range(len(plan.programs)):
-            outcomes.append(self._simulate(arm, first, attributes, start))
+        arms, names = len(plan.programs), plan.layout.outcomes
+        values = self._workspace().outcome_rows((arms, len(names), patients))
+        paths, hazards, logs = [], {}, []
+        for arm in range(arms):
+            self._simulate(arm, first, attributes, start, values[arm])
             if plan.pairs:
                 path, more = self._tally(arm, attributes)
                 paths.append(path)
                 hazards.update(more)
             if plan.keep_log:
                 logs.append(self._sojourns())
-        values = np.stack(outcomes)
         kept = values.copy() if plan.keep_outcomes else None
-        arms, names = len(plan.programs), plan.layout.outcomes
         mean, money = np.empty((arms, len(names))), np.empty((2 * arms, 2 * arms))
         within = np.empty((len(names), arms, arms))
-        columns = np.array([names.index(o) for o in ("cost_disc", "qaly_disc")])
-        moments.chunk_moments(values, columns, mean, within, money)
+        money_columns = np.array([names.index(o) for o in ("cost_disc", "qaly_disc")])
+        moments.chunk_moments(values, money_columns, mean, within, money)
         return ChunkResult(
             index=index,
             layout=plan.layout,

@@ -38,7 +38,14 @@ class Workspace:
                 for kind in (np.int64, np.int64, np.float64, np.int64, np.float64, np.float64)
             ),
         )
+        self._outcomes: dict[tuple[int, int, int], npt.NDArray[np.float64]] = {}
         self.resize_log(log_rows)
+
+    def outcome_rows(self, shape: tuple[int, int, int]) -> npt.NDArray[np.float64]:
+        """A float64 array [arm, outcome, patient] to fill, the same one for the same shape: fresh pages cost time."""
+        if shape not in self._outcomes:
+            self._outcomes[shape] = np.empty(shape)
+        return self._outcomes[shape]
 
     def resize_log(self, rows: int) -> None:
         self.log_index = np.zeros((3, 3 * rows), dtype=np.int64)
