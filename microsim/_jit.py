@@ -47,7 +47,8 @@ setattr(numba.config, "CACHE_DIR", os.environ["NUMBA_CACHE_DIR"])  # noqa: B010 
 Kernel = TypeVar("Kernel", bound=Callable[..., Any])
 
 
-_COMMON: dict[str, Any] = {"error_model": "numpy", "nogil": True}
+# No kernel allocates: without reference counting views cost nothing, and an allocation would fail to compile.
+_COMMON: dict[str, Any] = {"error_model": "numpy", "nogil": True, "_nrt": False}
 _INNER: dict[str, Any] = {**_COMMON, "no_cpython_wrapper": True, "no_cfunc_wrapper": True}
 
 

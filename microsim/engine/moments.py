@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import numpy as np
-
 from microsim._jit import entry, helper
 
 
@@ -12,17 +10,17 @@ def _mean(a):
     """Mean in eight interleaved sums: faster and more exact than one."""
     n = a.size
     whole = n - n % 8
-    s = np.zeros(8)
+    s0, s1, s2, s3, s4, s5, s6, s7 = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
     for i in range(0, whole, 8):
-        s[0] += a[i]
-        s[1] += a[i + 1]
-        s[2] += a[i + 2]
-        s[3] += a[i + 3]
-        s[4] += a[i + 4]
-        s[5] += a[i + 5]
-        s[6] += a[i + 6]
-        s[7] += a[i + 7]
-    total = ((s[0] + s[1]) + (s[2] + s[3])) + ((s[4] + s[5]) + (s[6] + s[7]))
+        s0 += a[i]
+        s1 += a[i + 1]
+        s2 += a[i + 2]
+        s3 += a[i + 3]
+        s4 += a[i + 4]
+        s5 += a[i + 5]
+        s6 += a[i + 6]
+        s7 += a[i + 7]
+    total = ((s0 + s1) + (s2 + s3)) + ((s4 + s5) + (s6 + s7))
     for i in range(whole, n):
         total += a[i]
     return total / n

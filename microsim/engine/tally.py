@@ -204,12 +204,12 @@ def _spread_lumps(edges, out, start, value, w):
 
 
 @entry
-def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, rows, x, lane, cell, end, levels, c, h,
+def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, rows, x, ints, lane, cell, end, levels, c, h,
                   integrated, full, part, integrated_d, full_d, part_d, reward_full, reward_part, lump):  # fmt: skip
     """Hazards and rewards of the arm ``p`` along logged sojourns, added to the given arrays.
 
     integrated float64[a, T] takes the non-exponential arcs, full and part float64[a, T+1] the exponential ones; *_d the
-    same on the sojourn grid; reward_full, reward_part float64[r, s, T+1]; lump float64[r, s, T]. rows and x are block
+    same on the sojourn grid; reward_full, reward_part float64[r, s, T+1]; lump float64[r, s, T]. rows, x and ints are block
     scratch (x needs 5 + arcs of a state rows), lane, cell, end, levels, c, h scratch of SEGMENTS.
     """
     arc_par, arcs, consts, gather, lump_row, numbers, reward_row, states, tape = (
@@ -227,7 +227,7 @@ def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, 
         rows[k, :] = consts[k]
     for block in range(n_blocks):
         s, first, w = log_index[2, 3 * block], log_index[2, 3 * block + 1], log_index[2, 3 * block + 2]
-        idx, at, level = np.empty(w, np.int64), np.empty(w, np.int64), np.empty(w, np.int64)
+        idx, at, level = ints[0], ints[1], ints[2]
         for i in range(w):
             idx[i] = log_index[0, first + i]
             at[i] = first + i

@@ -33,6 +33,7 @@ class Workspace:
         self._tally = (
             self.rows,
             np.zeros((5 + most_arcs, columns.BLOCK)),
+            self.ints,
             *(
                 np.zeros(tally.SEGMENTS, dtype=kind)
                 for kind in (np.int64, np.int64, np.float64, np.int64, np.float64, np.float64)
@@ -52,5 +53,5 @@ class Workspace:
         self.log_value = np.zeros((FIXED_FIELDS + self.fields, rows))
 
     def tally_scratch(self) -> tuple[npt.NDArray[Any], ...]:
-        """rows, x, lane, cell, end, levels, c, h as ``tally.tally_hazards`` takes them."""
+        """rows, x, ints, lane, cell, end, levels, c, h as ``tally.tally_hazards`` takes them."""
         return self._tally
