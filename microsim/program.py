@@ -6,6 +6,7 @@ built here and nowhere else, so each kernel sees one signature. Knows nothing of
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from typing import NamedTuple
@@ -18,7 +19,7 @@ from microsim.hazards import core
 from microsim.records.simulation import Layout
 from microsim.rng import stream_id
 from microsim.study.bound import BoundArm, BoundClock, BoundState, BoundStudy
-from microsim.study.expression import ARITY, MEMORY, Node
+from microsim.study.expression import ARITY, MEMORY, Node, const
 
 F = npt.NDArray[np.float64]
 I = npt.NDArray[np.int64]  # noqa: E741
@@ -142,6 +143,18 @@ def make_layout(study: BoundStudy) -> Layout:
     )
 
 
+def _cheaper(node: Node) -> Node:
+    """The same formula with powers of a positive constant as exponentials, and squares and roots as what they are."""
+    if node.op not in ARITY:
+        return node
+    args = tuple(_cheaper(a) for a in node.args)
+    if node.op == "pow" and args[0].is_const and args[0].value > 0.0:
+        return Node("exp", (Node("mul", (args[1], const(math.log(args[0].value)))),))
+    if node.op == "pow" and args[1].is_const and args[1].value in (0.5, 2.0):
+        return Node("sqrt", args[:1]) if args[1].value == 0.5 else Node("mul", (args[0], args[0]))
+    return Node(node.op, args)
+
+
 def _formulas(arm: BoundArm) -> list[Node]:
     out = [k.ratio for k in arm.clocks]
     for s in arm.states:
@@ -167,7 +180,7 @@ class _Lowering:
         self.attributes = [a.name for a in study.population.attributes]
         self.states = [s.name for s in study.arms[0].states]
         self.table = table
-        leaves = (n for formula in formulas for n in formula.walk())
+        leaves = (n for formula in formulas for n in _cheaper(formula).walk())
         self.consts = list(dict.fromkeys([0.0, *(n.value for n in leaves if n.is_const)]))
         self.tape: list[tuple[int, ...]] = []
         self.gather: list[tuple[int, ...]] = []
@@ -189,12 +202,15 @@ class _Lowering:
 
     def lower(self, node: Node) -> int:
         """Register row that holds the formula's value."""
+        return self._lower(_cheaper(node))
+
+    def _lower(self, node: Node) -> int:
         if node.is_const:
             return self.consts.index(node.value)
         if node in self.known:
             return self.known[node]
         if node.op in ARITY:
-            args = [self.lower(a) for a in node.args]
+            args = [self._lower(a) for a in node.args]
             row = self._row(node)
             self.tape.append((OPCODES[node.op], row, *(args + [args[0]] * 2)[:3]))
             return row
