@@ -80,14 +80,15 @@ def _announce(console: Console) -> None:
 
 def _write(result: Result, folder: Path) -> None:
     from microsim.records.folder import write_json, write_tables
-    from microsim.report.figures import save_figures
+    from microsim.report.figures import all_figures, save_figures
     from microsim.report.html import write_report
 
     write_tables(folder, result.tables)
     write_json(folder / "summary.json", result.summary)
     write_json(folder / "manifest.json", result.manifest)
-    save_figures(result, folder / "figures")
-    write_report(result, folder / "report.html")
+    drawings = all_figures(result)
+    save_figures(drawings, folder / "figures")
+    write_report(result, folder / "report.html", drawings=drawings)
 
 
 def run(arguments: argparse.Namespace) -> int:

@@ -1,4 +1,4 @@
-"""A result into its named figures, and the figures into a folder as SVG and PNG.
+"""A result into its named figures, and the figures into a folder as SVG, on request also as PNG.
 
 The names are those of the report's sections; the drawing itself lives beside this in the figure_* modules.
 """
@@ -6,7 +6,8 @@ The names are those of the report's sections; the drawing itself lives beside th
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from matplotlib.figure import Figure
@@ -34,12 +35,14 @@ __all__ = [
 
 @dataclass(frozen=True, slots=True)
 class Drawing:
-    """section: where in the report; name: file stem, unique in a result; caption: what the reader sees."""
+    """section: where in the report; name: file stem, unique in a result; caption: what the reader sees; svg: the figure
+    as a stand-alone document, made once for the page and the file (empty until asked for by ``all_figures``)."""
 
     section: str
     name: str
     caption: str
     figure: Figure
+    svg: bytes = b""
 
 
 def slug(text: str) -> str:
@@ -54,16 +57,18 @@ def all_figures(result: ResultLike) -> list[Drawing]:
     for drawing in drawings:
         count = taken[drawing.name] = taken.get(drawing.name, 0) + 1
         name = drawing.name if count == 1 else f"{drawing.name}-{count}"
-        distinct.append(Drawing(drawing.section, name, drawing.caption, drawing.figure))
+        svg = svg_bytes(drawing.figure, name, transparent=True)
+        distinct.append(replace(drawing, name=name, svg=svg))
     return distinct
 
 
-def save_figures(result: ResultLike, folder: Path) -> list[Path]:
-    """Write every figure as <name>.svg and <name>.png into the folder, made if absent; returns the paths."""
+def save_figures(drawings: Sequence[Drawing], folder: Path, *, png: bool = False) -> list[Path]:
+    """Write every figure as <name>.svg, on request also as <name>.png, into the folder, made if absent."""
     folder.mkdir(parents=True, exist_ok=True)
     paths = []
-    for drawing in all_figures(result):
-        for suffix, content in ((".svg", svg_bytes(drawing.figure, drawing.name)), (".png", png_bytes(drawing.figure))):
+    for drawing in drawings:
+        contents = {".svg": drawing.svg, **({".png": png_bytes(drawing.figure)} if png else {})}
+        for suffix, content in contents.items():
             path = folder / (drawing.name + suffix)
             path.write_bytes(content)
             paths.append(path)

@@ -141,6 +141,12 @@ def outcome_label(result: ResultLike, outcome: str) -> str:
     return label(result, kind, part)
 
 
+def quantity_label(result: ResultLike, outcome: str) -> str:
+    """Words for an outcome that stands without its group's heading."""
+    group = {"time": "Time: ", "entries": "Arrivals: ", "events": "Events: "}.get(outcome.partition(":")[0], "")
+    return group + outcome_label(result, outcome)
+
+
 def outcome_group(outcome: str) -> str:
     """Heading under which the full table lists an outcome."""
     head, _, part = outcome.partition(":")

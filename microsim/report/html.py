@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import os
 import secrets
+from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import count
 from pathlib import Path
@@ -52,8 +53,8 @@ class Section:
     items: tuple[str, ...]
 
 
-def render_report(result: ResultLike) -> str:
-    """The page as text. Raises ValueError if a table lacks a column its section needs."""
+def render_report(result: ResultLike, drawings: Sequence[Drawing] | None = None) -> str:
+    """The page as text, with figures drawn before or now. Raises ValueError if a table lacks a column its section needs."""
     environment = Environment(
         loader=PackageLoader("microsim.report"), autoescape=True, trim_blocks=True, lstrip_blocks=True,
         undefined=StrictUndefined,
@@ -71,13 +72,13 @@ def render_report(result: ResultLike) -> str:
         strip=strip,
         basis=verdict_basis(result),
         currency=currency_of(result),
-        sections=_sections(result),
+        sections=_sections(result, all_figures(result) if drawings is None else drawings),
     )
 
 
-def write_report(result: ResultLike, path: Path) -> None:
+def write_report(result: ResultLike, path: Path, *, drawings: Sequence[Drawing] | None = None) -> None:
     """Write the report to ``path`` (its folder is made if absent); an earlier file there is replaced whole."""
-    page = render_report(result)
+    page = render_report(result, drawings)
     path.parent.mkdir(parents=True, exist_ok=True)
     part = path.with_name(f".{path.name}.{secrets.token_hex(4)}.part")
     try:
@@ -87,8 +88,7 @@ def write_report(result: ResultLike, path: Path) -> None:
         part.unlink(missing_ok=True)
 
 
-def _sections(result: ResultLike) -> list[Section]:
-    drawings = all_figures(result)
+def _sections(result: ResultLike, drawings: Sequence[Drawing]) -> list[Section]:
     figure_numbers, table_numbers, section_numbers = count(1), count(1), count(1)
     sections = []
     for key, (tables, items) in _contents(result).items():
@@ -102,7 +102,7 @@ def _sections(result: ResultLike) -> list[Section]:
 
 def _picture(drawing: Drawing, number: int) -> Picture:
     width = round(72 * drawing.figure.get_figwidth())
-    svg = Markup(inline_svg(drawing.figure, drawing.name, description=drawing.caption))
+    svg = Markup(inline_svg(drawing.svg, drawing.name, description=drawing.caption))
     return Picture(number, drawing.name, drawing.caption, svg, width)
 
 

@@ -32,6 +32,7 @@ from microsim.report.frames import (
     outcome_group,
     outcome_label,
     plain,
+    quantity_label,
     rows_of,
     stated_rule,
     trimmed,
@@ -210,6 +211,10 @@ def gap_sheet(result: ResultLike) -> Sheet:
     return Sheet("Gap in incremental net benefit, split by cause.", heads, tuple(rows), left=2, note=note)
 
 
+_INCREMENTAL = "incremental "
+_NOT_SHOWN = ("entries:",)
+
+
 def outcome_gap_sheet(result: ResultLike) -> Sheet:
     """Split of the other quantities, stated cycle rule, the use the verdict rests on."""
     frame, rule, use = table(result, "gap"), stated_rule(result), verdict_use(result)
@@ -218,9 +223,18 @@ def outcome_gap_sheet(result: ResultLike) -> Sheet:
     for strategy in ordered(frame["strategy"]):
         rows.append((label(result, "strategies", strategy),))
         for r in rows_of(frame[frame["strategy"] == strategy]):
-            rows.append((outcome_label(result, str(r.quantity)), *_split(r)))
+            name = str(r.quantity)
+            if name.startswith(_INCREMENTAL) or name.startswith(_NOT_SHOWN):
+                continue
+            rows.append((quantity_label(result, name), *_split(r)))
+        steps = [r for r in rows_of(frame[frame["strategy"] == strategy]) if str(r.quantity).startswith(_INCREMENTAL)]
+        shown = [r for r in steps if not str(r.quantity).removeprefix(_INCREMENTAL).startswith(_NOT_SHOWN)]
+        if shown:
+            rows.append((f"{label(result, 'strategies', strategy)}, increment over the comparator",))
+            rows += [(quantity_label(result, str(r.quantity).removeprefix(_INCREMENTAL)), *_split(r)) for r in shown]
     caption = f"Gap in other quantities, split by cause; {USES.get(use, use)}."
-    return Sheet(caption, ("Quantity", *_SPLIT_HEADS), tuple(rows))
+    note = "Arrivals in states, and every use and cycle rule, are in the table “gap” of the result folder."
+    return Sheet(caption, ("Quantity", *_SPLIT_HEADS), tuple(rows), note=note)
 
 
 def cycle_sheet(result: ResultLike) -> Sheet:

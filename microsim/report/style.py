@@ -116,13 +116,13 @@ def png_bytes(figure: Figure, *, dots_per_inch: int = 200) -> bytes:
     return buffer.getvalue()
 
 
-def inline_svg(figure: Figure, name: str, *, description: str) -> str:
-    """The <svg> element alone, fit to stand in a page beside others.
+def inline_svg(document: bytes, name: str, *, description: str) -> str:
+    """The <svg> element of a document alone, fit to stand in a page beside others.
 
     Prologue, metadata, embedded style and namespace addresses are dropped (HTML needs none of them), identifiers get
     the figure's name as a prefix so that two figures of one page never share one.
     """
-    text = svg_bytes(figure, name, transparent=True).decode("utf-8")
+    text = document.decode("utf-8")
     text = text[text.index("<svg") :]
     text = re.sub(r"<metadata>.*?</metadata>", "", text, flags=re.DOTALL)
     text = re.sub(r"<style[^>]*>.*?</style>", "", text, count=1, flags=re.DOTALL)

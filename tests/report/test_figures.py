@@ -146,11 +146,13 @@ def test_a_dollar_sign_in_a_label_is_a_dollar_sign(result: Result) -> None:
 def test_every_figure_is_saved_twice_under_a_distinct_name(result: Result, tmp_path: Path) -> None:
     result.tables = {k: v for k, v in result.tables.items() if k in ("verdict", "gap", "net_benefit")}
     result.fits["home stay"] = result.fits["home_stay"]
-    paths = save_figures(result, tmp_path / "figures")
+    drawings = all_figures(result)
+    paths = save_figures(drawings, tmp_path / "figures", png=True)
     names = [p.name for p in paths]
-    assert len(names) == len(set(names)) == 2 * len(all_figures(result))
+    assert len(names) == len(set(names)) == 2 * len(drawings)
     assert {p.suffix for p in paths} == {".svg", ".png"}
     assert all(p.stat().st_size > 1_000 for p in paths)
+    assert {p.suffix for p in save_figures(drawings, tmp_path / "plain")} == {".svg"}
     assert paths[1].read_bytes()[:8] == b"\x89PNG\r\n\x1a\n"
 
 
