@@ -276,3 +276,37 @@ def test_three_strategies_and_different_discount_rates_work_end_to_end() -> None
     row = _gap(c, strategy="C", quantity="cost", use="own", cycle_rule="continuous").iloc[0]
     assert abs(row.total) <= 4.5 * row.total_se
     assert ONE.value == 1.0
+
+
+def test_a_study_in_months_gives_the_gap_of_the_same_study_in_years() -> None:
+    def clocks(hr: float, unit: float):
+        return (
+            clock("fall", "Well", "Ill", hazard("weibull", shape=0.6, scale=3.0 * unit), ratio=const(hr)),
+            clock("rise", "Ill", "Well", hazard("exponential", rate=2.0 / unit)),
+            clock("die", ("Well", "Ill"), "Dead", hazard("exponential", rate=0.08 / unit), background=True),
+        )
+
+    def states(unit: float):
+        return (
+            state("Well", start=1.0, utility=const(0.9), costs={"care": const(500.0 / unit)}),
+            state("Ill", utility=const(0.5), entry_costs={"care": const(300.0)}, entry_qaly=const(-0.01)),
+            state("Dead", absorbing=True),
+        )
+
+    found = []
+    for unit in (1.0, 12.0):
+        s = study(
+            (states(unit), clocks(1.0, unit)), (states(unit), clocks(0.7, unit)),
+            horizon=20.0 * unit, cycle=0.25 * unit, years_per_unit=1 / unit, discounting=Discounting(0.04, 0.02),
+        )  # fmt: skip
+        found.append(
+            compare(s, simulate(s, patients=2000, seed=5))
+            .tables["gap"]
+            .set_index(["strategy", "quantity", "use", "cycle_rule"])
+        )
+    years, months = found
+    for quantity in ("ly", "ly_disc", "qaly_disc", "cost_disc", "incremental net benefit"):
+        rows = [k for k in years.index if k[1] == quantity]
+        for column in ("full", "cohort", "total"):
+            np.testing.assert_allclose(months.loc[rows, column], years.loc[rows, column], rtol=1e-7, atol=1e-7)
+        np.testing.assert_allclose(months.loc[rows, "total_se"], years.loc[rows, "total_se"], rtol=1e-5, atol=1e-7)
