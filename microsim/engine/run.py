@@ -26,7 +26,7 @@ from microsim.study.bound import BoundStudy
 F = npt.NDArray[np.float64]
 
 GROUPS = 40
-CHUNK = 4096
+CHUNK = 2048
 TIME_CELLS = 160
 SOJOURN_CELLS = 32
 Progress = Callable[[int, int], None]
