@@ -110,8 +110,11 @@ class ChunkRunner:
         sums = program.outcomes
         queue.collect_outcomes(sums.ptr, sums.row, sums.weight, sums.constant, n, ws.accumulators, out)
 
-    def _fail(self, arm: int, first: int, attributes: F) -> None:
-        """Turn the workspace's status into an exception that names patient, state, formula and memory."""
+    def _fail(self, arm: int, first: int, attributes: F, *, along: int | None = None) -> None:
+        """Turn the workspace's status into an exception that names patient, state, formula and memory.
+
+        along: the strategy whose paths the arm's formulas were evaluated on, if not its own run.
+        """
         ws, plan = self._workspace(), self.plan
         name = plan.layout.strategies[arm]
         if ws.status[0] == columns.RUNAWAY:
@@ -122,9 +125,12 @@ class ChunkRunner:
         i = int(ws.status[1])
         what, state, _ = plan.programs[arm].formulas[int(ws.status[2])]
         values = {a.name: attributes[j, i] for j, a in enumerate(plan.study.population.attributes)}
-        values["time"] = ws.memory[0, i]
-        for f, (kind, s) in enumerate(plan.table.fields):
+        if along is None:
+            values["time"] = ws.memory[0, i]
+        for f, (kind, s) in enumerate(plan.table.fields if along is None else ()):
             values[kind if kind in ("events", "previous") else f"{kind}({plan.layout.states[s]})"] = ws.memory[3 + f, i]
+        if along is not None:
+            name += f" (its formulas along the patients of {plan.layout.strategies[along]}, for carried rates)"
         known = ", ".join(f"{k} = {v:.6g}" for k, v in values.items())
         raise SimulationError(
             f"strategy {name}, patient {first + i}, state {state}: {what} is not a finite number"
@@ -132,7 +138,9 @@ class ChunkRunner:
             "with min(...) or clip(...)."
         )
 
-    def _tally(self, path: int, attributes: F) -> tuple[tuple[F, ...], dict[tuple[int, int], tuple[F, ...]]]:
+    def _tally(
+        self, path: int, first: int, attributes: F
+    ) -> tuple[tuple[F, ...], dict[tuple[int, int], tuple[F, ...]]]:
         ws, plan, blocks = self._workspace(), self.plan, int(self._workspace().status[4])
         paths = path_arrays(plan)
         log = ws.log_index, ws.log_value, blocks, plan.grid.time, plan.grid.sojourn
@@ -140,7 +148,11 @@ class ChunkRunner:
         hazards = {}
         for pair in (p for p in plan.pairs if p[0] == path):
             hazards[pair] = hazard_arrays(plan)
-            tally.tally_hazards(plan.programs[pair[1]].arrays, *log, attributes, *ws.tally_scratch(), *hazards[pair])
+            tally.tally_hazards(
+                plan.programs[pair[1]].arrays, *log, attributes, *ws.tally_scratch(), *hazards[pair], ws.status
+            )
+            if ws.status[0] != columns.OK:
+                self._fail(pair[1], first, attributes, along=path)
         return paths, hazards
 
     def _sojourns(self) -> tuple[npt.NDArray[np.int64], F]:
@@ -163,7 +175,7 @@ class ChunkRunner:
         for arm in range(arms):
             self._simulate(arm, first, attributes, start, values[arm])
             if plan.pairs:
-                path, more = self._tally(arm, attributes)
+                path, more = self._tally(arm, first, attributes)
                 paths.append(path)
                 hazards.update(more)
             if plan.keep_log:

@@ -15,8 +15,7 @@ from microsim.engine.clocks import carry_thresholds, draw_next, fill_rows, first
 from microsim.engine.columns import (
     ARC,
     ARC_END,
-    BAD_FORMULA,
-    BEST,
+        BEST,
     BLOCK,
     CHECK,
     CHECK_END,
@@ -43,7 +42,7 @@ from microsim.engine.columns import (
     TRIVIAL,
 )  # fmt: skip
 from microsim.engine.rewards import add_entry_amounts, add_rewards, discount_integral
-from microsim.engine.tape import run_tape
+from microsim.engine.tape import check_rows, run_tape
 
 
 @helper
@@ -87,24 +86,6 @@ def _count_presence(state, cause, present, inverse_cell, horizon, x, w):
         row[_grid_edge(t0_[i], inverse_cell, last)] += 1.0
         end = _grid_edge(t1_[i], inverse_cell, last) if cause[i] >= 0 else last + 1
         row[end] -= 1.0
-
-
-@helper
-def _check(checks, first, last, idx, rows, status, w):
-    """First formula value of the block that is not finite (or a negative ratio): recorded, and False returned."""
-    for n in range(first, last):
-        row = rows[checks[n, 0]]
-        is_ratio = checks[n, 2] == 1
-        bad = 0
-        for i in range(w):
-            ok = (abs(row[i]) < np.inf) & ((row[i] >= 0.0) | (not is_ratio))
-            bad += 0 if ok else 1
-        if bad > 0:
-            for i in range(w):
-                if not (abs(row[i]) < np.inf) or (is_ratio and row[i] < 0.0):
-                    status[0], status[1], status[2] = BAD_FORMULA, idx[i], checks[n, 1]
-                    return False
-    return True
 
 
 @spliced
@@ -207,7 +188,7 @@ def _advance(p, state, key0, key1, draw, first_patient, attributes, memory, rema
         w,
     )
     run_tape(tape, states[state, TAPE], states[state, TAPE_END], rows, w)
-    if not _check(checks, states[state, CHECK], states[state, CHECK_END], idx, rows, status, w):
+    if not check_rows(checks, states[state, CHECK], states[state, CHECK_END], idx, rows, status, w):
         return False
     add_entry_amounts(p, state, idx, accumulators, rows, x, w)
     first_firing(p, state, key0, key1, draw, first_patient, idx, cause, pick, level, words, remaining, accumulators, attributes,

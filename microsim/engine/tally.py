@@ -15,6 +15,8 @@ from microsim.engine.columns import (
     ARC,
     ARC_END,
     BY,
+    CHECK,
+    CHECK_END,
     FAMILY,
     GATHER,
     GATHER_END,
@@ -27,7 +29,7 @@ from microsim.engine.columns import (
     TARGET,
     TRIVIAL,
 )  # fmt: skip
-from microsim.engine.tape import run_tape
+from microsim.engine.tape import check_rows, run_tape
 from microsim.hazards import kernels
 
 SEGMENTS = 2048  # pieces of sojourns evaluated together; a grid may have at most this many cells
@@ -205,16 +207,18 @@ def _spread_lumps(edges, out, start, value, w):
 
 @entry
 def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, rows, x, ints, lane, cell, end, levels, c, h,
-                  integrated, full, part, integrated_d, full_d, part_d, reward_full, reward_part, lump):  # fmt: skip
+                  integrated, full, part, integrated_d, full_d, part_d, reward_full, reward_part, lump, status):  # fmt: skip
     """Hazards and rewards of the arm ``p`` along logged sojourns, added to the given arrays.
 
     integrated float64[a, T] takes the non-exponential arcs, full and part float64[a, T+1] the exponential ones; *_d the
-    same on the sojourn grid; reward_full, reward_part float64[r, s, T+1]; lump float64[r, s, T]. rows, x and ints are block
-    scratch (x needs 5 + arcs of a state rows), lane, cell, end, levels, c, h scratch of SEGMENTS.
+    same on the sojourn grid; reward_full, reward_part float64[r, s, T+1]; lump float64[r, s, T]. status as in
+    ``queue.run_chunk``: a formula of the arm may fail on another arm's paths. rows, x and ints are block scratch (x needs
+    5 + arcs of a state rows), lane, cell, end, levels, c, h scratch of SEGMENTS.
     """
-    arc_par, arcs, consts, gather, lump_row, numbers, reward_row, states, tape = (
+    arc_par, arcs, checks, consts, gather, lump_row, numbers, reward_row, states, tape = (
         p.arc_par,
         p.arcs,
+        p.checks,
         p.consts,
         p.gather,
         p.lump_row,
@@ -237,6 +241,8 @@ def tally_hazards(p, log_index, log_value, n_blocks, time, sojourn, attributes, 
         fill_rows(gather, states[s, GATHER], states[s, GATHER_END], numbers[4], idx, at, x[0], attributes, log_value,
                   rows, w)  # fmt: skip
         run_tape(tape, states[s, TAPE], states[s, TAPE_END], rows, w)
+        if not check_rows(checks, states[s, CHECK], states[s, CHECK_END], idx, rows, status, w):
+            return
         for r in range(reward_row.shape[1]):
             row = reward_row[s, r]
             if row > 0:  # row 0 is the constant zero

@@ -9,6 +9,7 @@ from __future__ import annotations
 import numpy as np
 
 from microsim._jit import helper
+from microsim.engine.columns import BAD_FORMULA
 from microsim.hazards import vmath
 
 OPCODES = {
@@ -116,3 +117,21 @@ def run_tape(tape, first, last, rows, w):
             _comparison(code, d, a, b, w)
         else:
             _logic(code, d, a, b, c, w)
+
+
+@helper
+def check_rows(checks, first, last, idx, rows, status, w):
+    """First formula value of the block that is not finite (or a negative ratio): recorded, and False returned."""
+    for n in range(first, last):
+        row = rows[checks[n, 0]]
+        is_ratio = checks[n, 2] == 1
+        bad = 0
+        for i in range(w):
+            ok = (abs(row[i]) < np.inf) & ((row[i] >= 0.0) | (not is_ratio))
+            bad += 0 if ok else 1
+        if bad > 0:
+            for i in range(w):
+                if not (abs(row[i]) < np.inf) or (is_ratio and row[i] < 0.0):
+                    status[0], status[1], status[2] = BAD_FORMULA, idx[i], checks[n, 1]
+                    return False
+    return True

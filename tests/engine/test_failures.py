@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from bound_builder import ONE, attribute, clock, hazard, memory, op, state, study
@@ -70,3 +72,13 @@ def test_zero_is_a_legitimate_ratio() -> None:
     r = simulate(_loop(ratio=op("where", op("gt", attribute("x"), 0.0), 1.0, const(0.0))), patients=2000, seed=1)
     share = r.paths[0].present.sum(axis=0)[0, -1] / 2000
     assert share > 0.5
+
+
+@pytest.mark.parametrize("value", [op("log", op("sub", attribute("x"), 2.0)), const(-1.0)], ids=["nan", "negative"])
+def test_a_formula_that_fails_only_along_the_comparators_patients_is_not_carried(value: Node) -> None:
+    """Strategy B never enters the ward, so its own run is fine; along A's patients its ratio is not usable."""
+    a = _loop().arms[0]
+    ratio = op("where", op("gt", memory("visits", "Ward"), 0.0), value, 1e-12)
+    b = replace(a, name="B", clocks=(replace(a.clocks[0], ratio=ratio), *a.clocks[1:]))
+    with pytest.raises(SimulationError, match="along the patients of A"):
+        simulate(replace(_loop(), arms=(a, b)), patients=200, seed=1)
