@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import threading
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -148,9 +149,8 @@ class ChunkRunner:
         hazards = {}
         for pair in (p for p in plan.pairs if p[0] == path):
             hazards[pair] = hazard_arrays(plan)
-            tally.tally_hazards(
-                plan.programs[pair[1]].arrays, *log, attributes, *ws.tally_scratch(), *hazards[pair], ws.status
-            )
+            arguments: tuple[Any, ...] = (*log, attributes, *ws.tally_scratch(), *hazards[pair], ws.status)
+            tally.tally_hazards(plan.programs[pair[1]].arrays, *arguments)
             if ws.status[0] != columns.OK:
                 self._fail(pair[1], first, attributes, along=path)
         return paths, hazards

@@ -113,23 +113,60 @@ def _optimise(family: str, data: Data) -> tuple[F, F, str]:
     return w, information, "" if decrement < DECREMENT else "the optimiser stopped before the maximum"
 
 
-def _checked(times: F, events: F, *, entry: F, covariates: F, weights: F, family: str, names: Sequence[str]) -> Data:
-    if family not in WORKING:
-        raise FitError(f"unknown family {family!r}; known are {', '.join(WORKING)}.")
-    for name, array in (("times", times), ("entry", entry), ("covariates", covariates), ("weights", weights)):
-        if not np.isfinite(array).all():
+def _arrays(
+    times: npt.ArrayLike,
+    events: npt.ArrayLike,
+    *,
+    entry: npt.ArrayLike | None,
+    covariates: npt.ArrayLike | None,
+    weights: npt.ArrayLike | None,
+    family: str,
+) -> Data:
+    """As float64 of agreeing shapes. Nothing is broadcast or reshaped: a column too short would be stretched unseen."""
+    t = np.asarray(times, dtype=np.float64)
+    x = np.zeros((t.size, 0)) if covariates is None else np.asarray(covariates, dtype=np.float64)
+    data = Data(
+        t,
+        np.asarray(events, dtype=np.float64),
+        np.zeros_like(t) if entry is None else np.asarray(entry, dtype=np.float64),
+        x[:, None] if x.ndim == 1 else x,
+        np.ones_like(t) if weights is None else np.asarray(weights, dtype=np.float64),
+    )
+    for name in ("times", "events", "entry", "weights"):
+        if getattr(data, name).shape != (t.size,):
+            raise FitError(f"{family}: {name} must be one column with a row per duration ({t.size}).")
+    if data.covariates.ndim != 2 or len(data.covariates) != t.size:
+        raise FitError(f"{family}: covariates must have a row per duration ({t.size}) and a column per coefficient.")
+    return data
+
+
+def _check_data(family: str, data: Data) -> None:
+    for name in ("times", "events", "entry", "covariates", "weights"):
+        if not np.isfinite(getattr(data, name)).all():
             raise FitError(f"{family}: {name} hold a value that is not finite.")
-    if (times <= 0).any() or (entry < 0).any() or (entry >= times).any():
+    if not np.isin(data.events, (0.0, 1.0)).all():
+        raise FitError(f"{family}: events must be 1 (event) or 0 (censored); recode other values such as 1 and 2.")
+    if (data.times <= 0).any() or (data.entry < 0).any() or (data.entry >= data.times).any():
         raise FitError(f"{family}: every duration must be above zero and end after its entry.")
-    total, needed = int(events.sum()), len(WORKING[family]) + covariates.shape[1]
+    if (data.weights <= 0).any():
+        raise FitError(f"{family}: every weight must be above zero.")
+    total, needed = int(data.events.sum()), len(WORKING[family]) + data.covariates.shape[1]
     if total == 0:
-        raise FitError(f"{family}: all {times.size} durations are censored; nothing can be estimated.")
+        raise FitError(f"{family}: all {data.times.size} durations are censored; nothing can be estimated.")
     if total < needed:
         raise FitError(f"{family}: {total} events cannot support {needed} parameters.")
-    if (weights <= 0).any():
-        raise FitError(f"{family}: every weight must be above zero.")
-    _check_covariates(family, covariates, names)
-    return Data(times, events, entry, covariates, weights)
+
+
+def _check_names(family: str, names: Sequence[str], *, columns: int) -> None:
+    """One name per column, and none that stands for something else in the results."""
+    if len(names) != columns:
+        raise FitError(f"{family}: {len(names)} covariate names for {columns} columns.")
+    taken = [name for pair in WORKING[family] for name in pair]
+    for i, name in enumerate(names):
+        if name in names[:i]:
+            raise FitError(f"{family}: two covariates are called {name}; rename one.")
+        if name in taken:
+            raise FitError(f"{family}: a covariate cannot be called {name}, a parameter of this family; rename it.")
 
 
 def _check_covariates(family: str, covariates: F, names: Sequence[str]) -> None:
@@ -195,21 +232,17 @@ def fit_family(
     """Fit a family of ``hazards.core.PARAMETERS`` by maximum likelihood.
 
     times: float[n] > 0; events: bool[n], False = censored; entry: float[n], start of observation (left truncation);
-    covariates: float[n, p], proportional hazards; weights: float[n]. The log-likelihood is that of T itself. Raises
+    covariates: float[n, p] or float[n], proportional hazards; weights: float[n]. The log-likelihood is that of T itself. Raises
     FitError for unusable data, and for an optimum not found unless ``strict`` is false (then ``converged`` is False).
     """
-    t = np.asarray(times, dtype=np.float64)
-    x = np.zeros((t.size, 0)) if covariates is None else np.asarray(covariates, dtype=np.float64).reshape(t.size, -1)
+    if family not in WORKING:
+        raise FitError(f"unknown family {family!r}; known are {', '.join(WORKING)}.")
+    raw = _arrays(times, events, entry=entry, covariates=covariates, weights=weights, family=family)
+    t, x = raw.times, raw.covariates
     names = tuple(covariate_names) or tuple(f"x{i + 1}" for i in range(x.shape[1]))
-    raw = _checked(
-        t,
-        np.asarray(events, dtype=np.float64),
-        entry=np.zeros_like(t) if entry is None else np.asarray(entry, dtype=np.float64),
-        covariates=x,
-        weights=np.ones_like(t) if weights is None else np.asarray(weights, dtype=np.float64),
-        family=family,
-        names=names,
-    )
+    _check_names(family, names, columns=x.shape[1])
+    _check_data(family, raw)
+    _check_covariates(family, x, names)
     scale, spread = float(np.median(t)), x.std(axis=0)
     data = Data(t / scale, raw.events, raw.entry / scale, x / spread, raw.weights)
     w, information, wrong = _optimise(family, data)

@@ -36,7 +36,8 @@ class Fit:
     """params: family parameters by name, in the data's time unit; coefficients: log hazard ratios by name.
 
     working, working_names, covariance: maximum likelihood estimates on the working scale (family, then coefficients) and
-    the inverse observed information. n: subjects; person_time: time at risk. warnings: what a user should know.
+    the inverse observed information. n: subjects; person_time: time at risk; both and n_events count rows, unweighted.
+    warnings: what a user should know.
     """
 
     family: str

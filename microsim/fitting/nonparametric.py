@@ -7,6 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from microsim.errors import FitError
+
 F = npt.NDArray[np.float64]
 Z95 = 1.959963984540054
 
@@ -33,18 +35,34 @@ def at_risk(times: F, entry: F, when: F) -> npt.NDArray[np.int64]:
     return np.asarray(out, dtype=np.int64)
 
 
+def _flags(events: npt.ArrayLike, *, rows: int) -> npt.NDArray[np.bool_]:
+    """bool[n]. Codes other than 0 and 1 are refused: every one of them would count as an event."""
+    e = np.asarray(events)
+    if e.shape != (rows,) or not np.isin(e, (0, 1)).all():
+        raise FitError(f"events must be one column of {rows} rows, 1 for an event and 0 for none.")
+    return e.astype(bool)
+
+
+def _check_spans(start: F, stop: F, *, start_name: str) -> None:
+    """Each row must end, at a finite time, after it begins: who is never at risk can have no event."""
+    if stop.ndim != 1 or start.shape != stop.shape or not np.isfinite(stop).all() or not (start < stop).all():
+        raise FitError(f"times must be one column of finite numbers, each after its {start_name}.")
+
+
 def _counts(times: npt.ArrayLike, events: npt.ArrayLike, entry: npt.ArrayLike | None) -> tuple[F, F, F]:
     """Distinct event times, events and numbers at risk there."""
-    t, e = np.asarray(times, dtype=np.float64), np.asarray(events, dtype=bool)
+    t = np.asarray(times, dtype=np.float64)
     start = np.full_like(t, -np.inf) if entry is None else np.asarray(entry, dtype=np.float64)
+    _check_spans(start, t, start_name="entry")
     start = np.where(start <= 0, -np.inf, start)
-    when, deaths = np.unique(t[e], return_counts=True)
+    when, deaths = np.unique(t[_flags(events, rows=t.size)], return_counts=True)
     return when, deaths.astype(np.float64), at_risk(t, start, when).astype(np.float64)
 
 
 def kaplan_meier(times: npt.ArrayLike, events: npt.ArrayLike, *, entry: npt.ArrayLike | None = None) -> StepCurve:
     """Survivor function with Greenwood standard errors and log(-log) limits. times float[n], events bool[n], entry
-    float[n] for left truncation."""
+    float[n] for left truncation, where the curve is conditional on the first entry, and stays at zero once everybody
+    then at risk has had the event. Raises FitError for rows that do not end after their entry."""
     when, deaths, risk = _counts(times, events, entry)
     survival = np.cumprod(1.0 - deaths / risk)
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -88,10 +106,15 @@ def mean_cumulative_function(
 ) -> StepCurve:
     """Expected number of recurrent events by time, from (start, stop] rows of patients (Nelson 1988).
 
-    Standard errors and 95 % limits by resampling patients ``samples`` times with the given seed.
+    Standard errors and 95 % limits by resampling patients ``samples`` times with the given seed. Raises FitError for rows
+    that do not end after their start, for columns of unequal length and for fewer than two samples.
     """
+    a, b = np.asarray(start, dtype=np.float64), np.asarray(stop, dtype=np.float64)
+    _check_spans(a, b, start_name="start")
+    e = _flags(event, rows=b.size)
     who, index = np.unique(np.asarray(patient), return_inverse=True)
-    a, b, e = np.asarray(start, dtype=np.float64), np.asarray(stop, dtype=np.float64), np.asarray(event, dtype=bool)
+    if index.shape != b.shape or samples < 2:
+        raise FitError("the mean cumulative function needs a patient for every row and at least two samples.")
     when = np.unique(b[e])
     value = _mean_cumulative(a, b, e, np.ones(a.size), when)
     rng = np.random.default_rng(seed)

@@ -176,6 +176,24 @@ def test_the_wrong_family_fits_worse() -> None:
         ([4.0, 4.0, 4.0], [1, 1, 1], {"family": "weibull"}, "All events share one time"),
         ([4.0, 4.0, 4.0], [1, 1, 1], {"family": "lognormal"}, "All events share one time"),
         ([1.0, 2.0], [1, 1], {"family": "frechet"}, "unknown family"),
+        ([1.0, 2.0, 3.0], [1, 2, 1], {}, "events must be 1"),
+        ([1.0, 2.0, 3.0], [1, np.nan, 1], {}, "events hold a value that is not finite"),
+        ([1.0, 2.0, 3.0], [1], {}, "events must be one column"),
+        ([1.0, 2.0, 3.0], [1, 1, 1], {"entry": [0.5]}, "entry must be one column"),
+        ([1.0, 2.0, 3.0], [1, 1, 1], {"weights": [2.0]}, "weights must be one column"),
+        ([[1.0], [2.0]], [1, 1], {}, "times must be one column"),
+        ([1.0, 2.0, 3.0], [1, 1, 1], {"covariates": [1.0, 2.0]}, "a row per duration"),
+        ([1.0, 2.0, 3.0], [1, 1, 1], {"covariates": [[1.0, 2.0, 4.0], [0.0, 1.0, 0.0]]}, "a row per duration"),
+        ([], [], {}, "censored"),
+        ([1.0, 2.0], [1, 1], {"covariates": [1.0, 2.0], "covariate_names": ("a", "b")}, "2 covariate names for 1"),
+        (
+            [1.0, 2.0, 3.0, 4.0],
+            [1, 1, 1, 1],
+            {"covariates": [[1.0, 0.0], [2.0, 1.0], [4.0, 1.0], [3.0, 2.0]], "covariate_names": ("a", "a")},
+            "two covariates are called a",
+        ),
+        # a coefficient of that name would take the place of the parameter in draws
+        ([1.0, 2.0], [1, 1], {"covariates": [1.0, 2.0], "covariate_names": ("rate",)}, "cannot be called rate"),
     ],
 )
 def test_unusable_data_is_refused_in_words(times: list, events: list, options: dict, words: str) -> None:

